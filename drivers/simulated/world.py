@@ -22,13 +22,13 @@ AUDIO_STEPS_HZ = 192_000
 """Internal step rate of takes up to 96 kHz; a take at 48 kHz is oversampled four times."""
 
 _RELAY_OPERATE_S = 0.002
-_INPUTS = ("Vline", "Vreg", "Imeter")
+_INPUTS = ("Vline__fx", "Vreg__fx", "Imeter__fx")
 _OUTPUTS: tuple[str | tuple[str, str], ...] = (
     "jack_out",
     "line",
     ("meter_hi", "meter_lo"),
     ("sup_plus", "sup_minus"),
-    "i(Vreg)",
+    "i(Vreg__fx)",
 )
 _JACK_OUT, _LINE, _METER, _SUPPLY, _SUPPLY_AMPS = range(5)
 _WATCH_S = 0.1
