@@ -1,4 +1,4 @@
-"""A netlist as it is written: parts, models and parameters with their expressions unevaluated, and pure edits of it."""
+"""A netlist as it is written: parts, models, parameters with their expressions, and pure edits of it."""
 
 from __future__ import annotations
 
@@ -19,7 +19,7 @@ class Part:
     nodes : tuple of str
         Lower case, ``gnd`` written as ``0``; Q: collector, base, emitter; E and G: out+, out-, in+, in-.
     value : str
-        Expression without braces: ohms, farads, henries, DC volts or amps, gain, or siemens. For D and Q the area.
+        Expression without braces: ohms, farads, henries, DC volts or amps, gain, or siemens; D and Q: area.
     line : int
         Line of the file, 0 when the part was added afterwards.
     model : str
@@ -44,7 +44,7 @@ class Part:
 
 @dataclass(frozen=True)
 class Model:
-    """A .model card: lower-case `name`, `kind` "d", "npn" or "pnp", and parameters as (lower-case name, expression)."""
+    """A .model card: `name` and `kind` ("d", "npn", "pnp") in lower case, parameters (name, expression)."""
 
     name: str
     kind: str
@@ -181,7 +181,7 @@ class Netlist:
         return replace(self, params=(*kept, Param(lowered, expression, line)))
 
     def joined_with(self, other: Netlist) -> Netlist:
-        """Return both netlists as one circuit: nodes of equal name are one node; title and temperature are kept.
+        """Return both netlists as one circuit: nodes of equal name are one; title and temperature are kept.
 
         A name that stands in both stays twice and is reported by `elaborate`.
         """

@@ -1,16 +1,18 @@
 """Device equations of SPICE as scalar functions: junctions, diode, Gummel-Poon transistor, their charges.
 
-Every function takes floats, returns a tuple of floats and uses nothing but arithmetic and `math`, so that it runs as
-plain Python and compiles with ``numba.njit`` unchanged. Voltages are in the device's own polarity (PNP: negate node
-voltages before, currents after). gmin is not in here: whoever assembles the circuit puts it across each junction.
+Every function takes floats, returns a tuple of floats and uses nothing but arithmetic and `math`, so that it
+runs as plain Python and compiles with ``numba.njit`` unchanged. Voltages are in the device's own polarity
+(PNP: negate node voltages before, currents after). gmin is not in here: whoever assembles the circuit puts
+it across junctions.
 
-Below -3 N VT SPICE replaces the exponential by a cubic tail that meets it with equal slope; germanium stages feel the
-difference (tens of microvolts), so the tail is part of the law here too.
+Below -3 N VT SPICE replaces the exponential by a cubic tail that meets it with equal slope; germanium stages
+feel the difference (tens of microvolts), so the tail is part of the law here too.
 
 References
 ----------
 L. W. Nagel, "SPICE2: A Computer Program to Simulate Semiconductor Circuits", UCB/ERL M520, 1975, appendix 2.
-H. K. Gummel and H. C. Poon, "An Integral Charge Control Model of Bipolar Transistors", Bell Syst. Tech. J. 49, 1970.
+H. K. Gummel and H. C. Poon, "An Integral Charge Control Model of Bipolar Transistors", Bell Syst. Tech. J.
+49, 1970.
 """
 
 from __future__ import annotations
@@ -122,8 +124,8 @@ def bjt_currents(
 ) -> tuple[float, float, float, float, float, float]:
     """Return (ic, ib, dic/dvbe, dic/dvbc, dib/dvbe, dib/dvbc) of a Gummel-Poon transistor.
 
-    Currents flow into collector and base. All of the DC law hangs on the two port voltages alone. The parameters
-    after `vbc` come in the order of `bjt_values`.
+    Currents flow into collector and base and hang on the two port voltages alone. The parameters after `vbc`
+    come in the order of `bjt_values`.
     """
     forward, g_forward = junction_current(vbe, is_amps, nf_vt)
     reverse, g_reverse = junction_current(vbc, is_amps, nr_vt)
@@ -182,8 +184,8 @@ def bjt_charges(
 ) -> tuple[float, float, float, float, float]:
     """Return (qbe, qbc, dqbe/dvbe, dqbe/dvbc, dqbc/dvbc) in coulombs and farads.
 
-    The forward diffusion charge is TF If / qb while the junction is forward biased, so qbe depends a little on vbc.
-    The parameters after `vbc` come in the order of `bjt_charge_values`.
+    The forward diffusion charge is TF If / qb while the junction is forward biased, so qbe depends a little
+    on vbc. The parameters after `vbc` come in the order of `bjt_charge_values`.
     """
     qbe, cbe = depletion_charge(vbe, cje_farads, vje_volts, mje, fc)
     qbc, cbc = depletion_charge(vbc, cjc_farads, vjc_volts, mjc, fc)

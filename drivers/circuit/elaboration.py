@@ -241,7 +241,7 @@ class _Builder:
             accepted = " or ".join(kinds).upper()
             self.report(
                 part.line,
-                f"'{part.name}': .model '{part.model}' is of kind {found[0].kind.upper()}, accepted: {accepted}",
+                f"'{part.name}': .model '{part.model}' is a {found[0].kind.upper()}, accepted: {accepted}",
             )
             return None
         return found

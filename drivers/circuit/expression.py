@@ -1,6 +1,7 @@
 """Numbers with SPICE suffixes, and expressions over parameters, as ngspice reads them.
 
-Grammar, loosest first: ``c ? a : b``, ``||``, ``&&``, comparisons, ``+ -``, ``* / %``, unary sign and ``!``, ``** ^``.
+Grammar, loosest first: ``c ? a : b``, ``||``, ``&&``, comparisons, ``+ -``, ``* / %``, unary sign and ``!``,
+``** ^`` (from left to right, of the magnitude of the base).
 """
 
 from __future__ import annotations
@@ -20,23 +21,22 @@ _TOKEN = re.compile(
     r"|(?P<sign>\*\*|<=|>=|==|!=|<>|&&|\|\||[-+*/%^()<>?:,!]))"
 )
 _SUFFIXES = (
-    ("meg", 1e6),
-    ("mil", 25.4e-6),
-    ("t", 1e12),
-    ("g", 1e9),
-    ("k", 1e3),
-    ("m", 1e-3),
-    ("u", 1e-6),
-    ("µ", 1e-6),
-    ("μ", 1e-6),
-    ("n", 1e-9),
-    ("p", 1e-12),
-    ("f", 1e-15),
+    ("meg", "e6"),
+    ("t", "e12"),
+    ("g", "e9"),
+    ("k", "e3"),
+    ("m", "e-3"),
+    ("u", "e-6"),
+    ("µ", "e-6"),
+    ("μ", "e-6"),
+    ("n", "e-9"),
+    ("p", "e-12"),
+    ("f", "e-15"),
 )
 
 
 def read_number(text: str) -> float:
-    """Return the value of a number with an optional SPICE suffix and unit letters, e.g. ``4.7k``, ``10Meg``, ``5V``.
+    """Return the value of a number with an optional SPICE suffix and unit letters: ``4.7k``, ``5V``.
 
     ``m`` and ``M`` are both milli, as in SPICE.
 
@@ -50,18 +50,14 @@ def read_number(text: str) -> float:
         raise BadExpression(
             f"'{text}' is not a number (accepted: 4.7k, 10Meg, 1e-6, 33u; suffixes T G Meg k m mil u n p f)"
         )
-    whole = match.group(0)
-    letters = match.group("letters")
-    number = float(whole[: len(whole) - len(letters)])
-    return number * _suffix(letters)
-
-
-def _suffix(letters: str) -> float:
-    lowered = letters.lower()
-    for suffix, factor in _SUFFIXES:
-        if lowered.startswith(suffix):
-            return factor
-    return 1.0
+    letters = match.group("letters").lower()
+    digits = match.group(0)[: len(match.group(0)) - len(letters)]
+    if letters.startswith("mil"):
+        return float(digits) * 25.4e-6
+    suffix = next((exponent for name, exponent in _SUFFIXES if letters.startswith(name)), "")
+    if "e" in digits.lower():
+        return float(digits) * float(f"1{suffix}")
+    return float(f"{digits}{suffix}")  # 60n is read as 60e-9, the double nearest to what was written
 
 
 def _sign(x: float) -> float:

@@ -50,9 +50,40 @@ _NEUTRAL: Mapping[str, Mapping[str, float]] = {
 }
 # Parameters that only say more about one of the above, so that any value is without effect.
 _IDLE: Mapping[str, frozenset[str]] = {
-    "d": frozenset("ibv nbv nr vp php mjsw fcs nz bv_max id_max fv_max te_max".split()),
+    "d": frozenset(
+        [
+            "ibv",
+            "nbv",
+            "nr",
+            "vp",
+            "php",
+            "mjsw",
+            "fcs",
+            "nz",
+            "bv_max",
+            "id_max",
+            "fv_max",
+            "te_max",
+        ]
+    ),
     "bjt": frozenset(
-        "vtf itf irb vjs ps mjs ms ns vbe_max vbc_max vce_max pd_max ic_max ib_max te_max".split()
+        [
+            "vtf",
+            "itf",
+            "irb",
+            "vjs",
+            "ps",
+            "mjs",
+            "ms",
+            "ns",
+            "vbe_max",
+            "vbc_max",
+            "vce_max",
+            "pd_max",
+            "ic_max",
+            "ib_max",
+            "te_max",
+        ]
     ),
 }
 

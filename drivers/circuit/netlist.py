@@ -1,9 +1,9 @@
 """SPICE netlists: the subset that makes up a pedal, readable by any SPICE unchanged.
 
-Accepted: a title line; parts R C L V I E G D Q; ``.model`` of kind D, NPN, PNP; ``.param``; ``{expressions}`` and
-``'expressions'``; ``.temp`` and ``.options temp= tnom= gmin=``; comments ``*``, ``;``, ``$``, ``//``; continuation
-``+``; suffixes T G Meg K mil m u n p f. Case does not matter. Cards that ask for analyses or output are passed over
-and noted. Anything else is a fault, reported with file and line, all faults together.
+Accepted: a title line; parts R C L V I E G D Q; ``.model`` of kind D, NPN, PNP; ``.param``; ``{expressions}``
+and ``'expressions'``; ``.temp`` and ``.options temp= tnom= gmin=``; comments ``*``, ``;``, ``$``, ``//``;
+continuation ``+``; suffixes T G Meg K mil m u n p f. Case does not matter. Cards that ask for analyses or
+output are passed over and noted. Anything else is a fault, reported with file and line, all faults together.
 """
 
 from __future__ import annotations
@@ -19,8 +19,27 @@ from drivers.circuit.part_cards import CardFault, read_assignments, read_model, 
 __all__ = ["Model", "Netlist", "Param", "Part", "elaborate", "parse_netlist", "read_netlist"]
 
 _PASSED_OVER = frozenset(
-    ".ac .tran .dc .op .tf .pz .sens .noise .disto .save .print .plot .probe .four .meas .measure .width".split()
-    + [".options", ".option", ".opt", ".nodeset", ".global", ".csparam"]
+    [
+        ".ac",
+        ".tran",
+        ".dc",
+        ".op",
+        ".tf",
+        ".pz",
+        ".sens",
+        ".noise",
+        ".disto",
+        ".save",
+        ".print",
+        ".plot",
+        ".probe",
+        ".four",
+        ".meas",
+        ".measure",
+        ".width",
+        ".nodeset",
+        ".global",
+    ]
 )
 _NOT_YET = {
     ".subckt": "subcircuits are not read; write the parts out",

@@ -172,7 +172,7 @@ def read_model(words: list[str], line: int) -> Model:
 
 
 def read_assignments(words: list[str], whose: str, *, formulas: bool = True) -> tuple[tuple[str, str], ...]:
-    """Return (lower-case name, expression) of ``a=1 b={a*2} c=a+1``; `formulas` allows the last, without braces.
+    """Return (lower-case name, expression) of ``a=1 b={a*2} c=a+1``; `formulas` allows the last of these.
 
     Raises
     ------

@@ -1,9 +1,9 @@
-"""Model parameters at the circuit's temperature, after SPICE: saturation currents, gains, leakage, depletion layers.
+"""Model parameters at the circuit's temperature, after SPICE: saturation currents, gains, leakage, charges.
 
 References
 ----------
-SPICE3 manual (UCB 1993), sections on the diode and BJT models, "Temperature dependence"; where that manual leaves a
-constant open, what ngspice 39 computes (compared in tests/circuit).
+SPICE3 user's manual (UCB, 1993), section "Temperature dependence"; where it leaves a constant open, what
+ngspice 39 computes (compared in tests/circuit).
 """
 
 from __future__ import annotations
