@@ -44,7 +44,10 @@ class Part:
 
 @dataclass(frozen=True)
 class Model:
-    """A .model card: `name` and `kind` ("d", "npn", "pnp") in lower case, parameters (name, expression)."""
+    """A .model card: `name` and `kind` ("d", "npn", "pnp") in lower case, parameters (name, expression).
+
+    Parameters carry their canonical lower-case names (CJO for CJ0).
+    """
 
     name: str
     kind: str

@@ -21,7 +21,7 @@ from drivers.circuit.elements import (
 )
 from drivers.circuit.errors import BadExpression, BadNetlist, NetlistFault, UnknownName, nearest_names
 from drivers.circuit.expression import evaluate, names_in
-from drivers.circuit.model_parameters import canonical_name, parameter_fault
+from drivers.circuit.model_parameters import parameter_fault
 from drivers.circuit.temperature import bjt_law, diode_law
 from drivers.circuit.wiring import wiring_faults
 
@@ -180,8 +180,7 @@ class _Builder:
                 continue
             given: dict[str, float] = {}
             for name, expression in model.parameters:
-                canonical = canonical_name(model.kind, name)
-                given[canonical] = self._value(expression, model.line, f".model {model.name} {name.upper()}")
+                given[name] = self._value(expression, model.line, f".model {model.name} {name.upper()}")
             for name, value in given.items():
                 wrong = parameter_fault(model.kind, name, value, given)
                 if wrong:

@@ -8,6 +8,7 @@ from collections.abc import Callable
 from drivers.circuit.cards import Model, Part
 from drivers.circuit.errors import BadExpression
 from drivers.circuit.expression import read_number
+from drivers.circuit.model_parameters import canonical_name
 
 _WORD = re.compile(r"\{[^{}]*\}|'[^']*'|=|[()]|[^\s,(){}'=]+")
 _NODES_OF = {"r": 2, "c": 2, "l": 2, "v": 2, "i": 2, "e": 4, "g": 4, "d": 2, "q": 3}
@@ -168,7 +169,8 @@ def read_model(words: list[str], line: int) -> Model:
         raise CardFault(f"'.model {words[1]}': unknown kind '{words[2]}' (accepted: D, NPN, PNP)")
     inside = [word for word in words[3:] if word not in "()"]
     parameters = read_assignments(inside, f".model {words[1]}", formulas=False) if inside else ()
-    return Model(words[1].lower(), kind, tuple(parameters), line)
+    named = {canonical_name(kind, name): expression for name, expression in parameters}
+    return Model(words[1].lower(), kind, tuple(named.items()), line)
 
 
 def read_assignments(words: list[str], whose: str, *, formulas: bool = True) -> tuple[tuple[str, str], ...]:

@@ -144,7 +144,7 @@ def _solve(
     matrices = linear.conductance + 1j * omega[:, None, None] * linear.susceptance
     right = np.broadcast_to(excitation[:, None], (len(omega), len(excitation), 1))
     try:
-        x: NDArray[np.complex128] = np.linalg.solve(matrices, right)[..., 0]
+        x = np.asarray(np.linalg.solve(matrices, right)[..., 0], dtype=np.complex128)
     except np.linalg.LinAlgError as error:
         raise NumericBreakdown("the circuit has no unique small-signal answer (singular matrix)") from error
     if not np.all(np.isfinite(x)):
