@@ -42,6 +42,7 @@ WRITTEN = [
     (9, "V", 9.0),
     (0.0004, "A", 0.0004),
     ("0.5", "ratio", 0.5),
+    (0.25, "", 0.25),
 ]
 
 # IEC 60062:2016, clause 6 (letter and digit code for resistance and capacitance values).
@@ -132,7 +133,7 @@ def test_a_quantity_is_shown_with_prefix_and_significant_digits(value: float, un
     assert format_quantity(value, unit) == text
 
 
-UNITS = st.sampled_from(["V", "A", "Ω", "F", "H", "Hz", "s", "W", "°C", "dB", "ratio", "V/s"])
+UNITS = st.sampled_from(["V", "A", "Ω", "F", "H", "Hz", "s", "W", "°C", "dB", "ratio", "V/s", ""])
 
 
 @given(st.floats(allow_nan=False, allow_infinity=False), UNITS)
