@@ -5,6 +5,7 @@ from __future__ import annotations
 import csv
 import os
 import re
+import signal
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
 
@@ -274,6 +275,41 @@ def test_a_short_write_is_continued(station: Station) -> None:
     with station.open(disk=Nibbling()) as journal:
         station.run_unit(journal)
     assert verify_journal(journal.folder) is None
+
+
+@pytest.mark.parametrize("call", ["write", "sync"])
+def test_ctrl_c_while_a_group_is_written_comes_after_it_and_the_run_can_be_closed(
+    station: Station, call: str
+) -> None:
+    class Interrupted(Disk):
+        at = ""
+
+        def write(self, descriptor: int, data: bytes) -> int:
+            taken = super().write(descriptor, data)
+            self.interrupt("write")
+            return taken
+
+        def sync(self, descriptor: int) -> None:
+            super().sync(descriptor)
+            self.interrupt("sync")
+
+        def interrupt(self, place: str) -> None:
+            if self.at == place:
+                self.at = ""
+                signal.raise_signal(signal.SIGINT)
+
+    disk = Interrupted()
+    with station.open(disk=disk) as journal:
+        header = station.header(journal)
+        journal.open_run(header)
+        disk.at = call
+        with pytest.raises(KeyboardInterrupt):
+            journal.append_step(header, "all", (good_current(), bad_node()))
+        journal.close_run(RunResult(header, (), Verdict.STOPPED, "stopped by a person", 1.0))
+    (run,) = runs_of(station.root, "PT-2612-0001")
+    assert (run.verdict, run.complete, len(run.readings)) == (Verdict.STOPPED, True, 2)
+    assert verify_journal(journal.folder) is None
+    assert signal.getsignal(signal.SIGINT) is signal.default_int_handler
 
 
 def test_after_a_failed_sync_nothing_more_is_written(station: Station) -> None:
