@@ -157,17 +157,7 @@ class Bjt:
     law: BjtLaw
 
 
-Element = (
-    Resistor
-    | Capacitor
-    | Inductor
-    | VoltageSource
-    | CurrentSource
-    | Vcvs
-    | Vccs
-    | Diode
-    | Bjt
-)
+Element = Resistor | Capacitor | Inductor | VoltageSource | CurrentSource | Vcvs | Vccs | Diode | Bjt
 
 
 @dataclass(frozen=True)

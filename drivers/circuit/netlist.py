@@ -66,14 +66,14 @@ class _Draft:
     models: list[Model] = field(default_factory=list)
     params: list[Param] = field(default_factory=list)
     options: dict[str, str] = field(default_factory=dict)
-    notes: list[str] = field(default_factory=list)
+    notes: list[tuple[int, str]] = field(default_factory=list)
     faults: list[NetlistFault] = field(default_factory=list)
 
     def fault(self, line: int, text: str) -> None:
         self.faults.append(NetlistFault(self.path, line, text))
 
     def note(self, line: int, text: str) -> None:
-        self.notes.append(f"{self.path}:{line}: {text}")
+        self.notes.append((line, f"{self.path}:{line}: {text}"))
 
 
 def read_netlist(path: Path) -> Netlist:
@@ -118,7 +118,7 @@ def parse_netlist(text: str, path: str = "netlist") -> Netlist:
         tnom_celsius=draft.options.get("tnom", "27"),
         gmin_siemens=draft.options.get("gmin", "1e-12"),
         path=path,
-        notes=tuple(draft.notes),
+        notes=tuple(text for _, text in sorted(draft.notes)),
     )
     if not draft.parts and not draft.faults:
         draft.fault(0, "has no parts (a netlist starts with a title line, then one part a line)")

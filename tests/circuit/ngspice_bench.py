@@ -17,7 +17,7 @@ TIGHT = "reltol=1e-7 abstol=1e-15 vntol=1e-9 chgtol=1e-17"
 
 @dataclass(frozen=True)
 class Table:
-    """Columns of an analysis: `scale` is frequency or time (one entry for .op), `columns` by lower-case name."""
+    """Columns of an analysis: `scale` is frequency or time (a 0 for .op), `columns` by lower-case name."""
 
     scale: NDArray[np.float64]
     columns: Mapping[str, NDArray[np.complex128]]
@@ -81,8 +81,8 @@ class Ngspice:
     ) -> Table:
         """Run one analysis.
 
-        `params` override .param cards; `cards` are added; `replace_cards` puts a card in the place of the one that
-        starts with the given part name.
+        `params` override .param cards; `cards` are added; `replace_cards` puts a card in the place of the one
+        that starts with the given part name.
         """
         lines = deck.read_text(encoding="utf-8").splitlines()
         end = next((i for i, line in enumerate(lines) if line.strip().lower() == ".end"), len(lines))
@@ -97,7 +97,13 @@ class Ngspice:
             lines.append(f".temp {celsius!r}")
         # alterparam works on the deck as read; reset reads it in again with the new value
         altered = [f"alterparam {name}={value!r}" for name, value in (params or {}).items()]
-        lines += [".control", "set filetype=ascii", "set numdgt=12", *altered, *(["reset"] if altered else [])]
+        lines += [
+            ".control",
+            "set filetype=ascii",
+            "set numdgt=12",
+            *altered,
+            *(["reset"] if altered else []),
+        ]
         lines += ["save all", analysis, f"write {raw.name}", "quit", ".endc", ".end"]
         card_file = self._folder / "deck.cir"
         card_file.write_text("\n".join(lines) + "\n", encoding="utf-8")
@@ -121,7 +127,9 @@ def _bare(name: str) -> str:
 def read_raw(path: Path) -> Table:
     """Read an ASCII raw file of one analysis (SPICE3 manual, appendix on raw files)."""
     head, _, body = path.read_text(encoding="utf-8").partition("Values:\n")
-    names = [line.split()[1].lower() for line in head.partition("Variables:")[2].splitlines() if line.strip()]
+    names = [
+        line.split()[1].lower() for line in head.partition("\nVariables:")[2].splitlines() if line.strip()
+    ]
     is_complex = "complex" in head.partition("Flags:")[2].splitlines()[0]
     has_scale = names[0] in ("time", "frequency")
     words = body.split()
