@@ -165,9 +165,9 @@ class MultimeterDialect:
 class SwitchboxCommands:
     """What a switchbox is told and asked.
 
-    ``{channels}`` takes a list joined by commas, ``{channel}`` one at a time. With ``frames = "hex"``
-    templates are rows of bytes in hexadecimal in which ``{channel:02X}`` and ``{sum}`` (low byte of the sum of all the
-    bytes before it) may stand.
+    ``{channels}`` takes a list joined by commas, ``{channel}`` one each time. With ``frames = "hex"`` these
+    are bytes in hexadecimal in which ``{channel:02X}`` and ``{sum}`` may stand: the low byte of the sum of
+    all bytes before it.
     """
 
     close: str = _template("channels", "channel", "sum")

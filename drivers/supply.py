@@ -212,7 +212,7 @@ class SupplyDriver:
         if volts > self._over_volts:
             self.output_off()
             raise ProtectionTripped(
-                f"{self._exchange.where}: {volts:g} V exceeds the {self._over_volts:g} V allowed; switched off"
+                f"{self._exchange.where}: {volts:g} V exceeds the allowed {self._over_volts:g} V; off now"
             )
 
     def _read(self, question: str, rows: tuple[AccuracyRow, ...], unit: str) -> Measured:

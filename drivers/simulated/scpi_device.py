@@ -13,7 +13,7 @@ from collections.abc import Callable, Iterable
 from dataclasses import dataclass
 from typing import Any, Protocol
 
-from drivers.simulated.scpi_status import OPC, Register, ScpiError, Status
+from drivers.simulated.scpi_status import CME, OPC, Register, ScpiError, Status, event_bit
 from drivers.simulated.scpi_syntax import (
     Bound,
     Choice,
@@ -172,15 +172,16 @@ class ScpiDevice:
 
     def _execute_unit(self, unit: Unit, answers: list[str]) -> None:
         command = self._find(unit.header)
-        values = _parse_parameters(command, unit.parameters)
-        self.journal.append(
-            JournalEntry(self._now_s(), " ".join((unit.header, ",".join(unit.parameters))).strip())
-        )
+        typed = " ".join((unit.header, ",".join(unit.parameters))).strip()
         self.refresh()
         try:
+            values = _parse_parameters(command, unit.parameters)
+            self.journal.append(JournalEntry(self._now_s(), typed))
             answer = command.run(*values)
-        except ScpiError as error:  # an execution error spoils its own unit only
-            self.status.add_error(error.code, error.text)
+        except ScpiError as error:
+            if event_bit(error.code) == CME:
+                raise
+            self.status.add_error(error.code, error.text)  # an execution error spoils its own unit only
             return
         if answer is not None:
             answers.append(answer)
