@@ -15,6 +15,9 @@ from drivers.circuit.assembly import BJT_PARAMETERS, DIODE_PARAMETERS
 
 _MOST_UNROLLED_PORTS = 12
 _BJT_LAW_ARGUMENTS = 13
+_NEAR_VOLTS = 1e-4
+"""Within this distance a charge is taken along its tangent: off by (0.1 mV / VT)^2 / 2, 8e-6 of the diffusion charge
+of the same distance, and without the logarithms that a depletion charge costs."""
 _LAWS = (
     "junction_current",
     "depletion_charge",
@@ -31,6 +34,8 @@ def kernel_source(bjts: int, diodes: int, charged: bool) -> str:
     parts = [_HEAD, _device_laws(), _evaluate(bjts, diodes, charged), _ARRAY_NEWTON]
     solve = _unrolled(bjts, diodes, charged) if ports <= _MOST_UNROLLED_PORTS else _BY_ARRAYS
     advance = _ADVANCE.replace("JUNCTIONS\n", _indented(solve, 8) + "\n" if ports else "")
+    opening = _no_charges_yet(bjts, diodes) if charged else []
+    advance = advance.replace("OPENING\n", "".join(_indented(line, 4) + "\n" for line in opening))
     parts += [advance, _SETTLE]
     return "\n\n".join(parts).replace("PORTS", str(ports)) + "\n"
 
@@ -85,7 +90,12 @@ def _law_lines(bjts: int, diodes: int, charged: bool) -> tuple[list[str], dict[t
         if charged:
             charge = _arguments(base + 2 + _BJT_LAW_ARGUMENTS, BJT_PARAMETERS - 2 - _BJT_LAW_ARGUMENTS)
             lines += [
-                f"q{j}, q{k}, f{j}_{j}, f{j}_{k}, f{k}_{k} = bjt_charges(w{j}, w{k}, {charge})",
+                f"if not (abs(w{j} - x{j}) < {_NEAR_VOLTS} and abs(w{k} - x{k}) < {_NEAR_VOLTS}):",
+                f"    e{j}, e{k}, f{j}_{j}, f{j}_{k}, f{k}_{k} = bjt_charges(w{j}, w{k}, {charge})",
+                f"    x{j} = w{j}",
+                f"    x{k} = w{k}",
+                f"q{j} = e{j} + f{j}_{j} * (w{j} - x{j}) + f{j}_{k} * (w{k} - x{k})",
+                f"q{k} = e{k} + f{k}_{k} * (w{k} - x{k})",
                 f"i{j} += per_second * (q{j} - h{j})",
                 f"i{k} += per_second * (q{k} - h{k})",
                 f"g{j}_{j} += per_second * f{j}_{j}",
@@ -102,7 +112,10 @@ def _law_lines(bjts: int, diodes: int, charged: bool) -> tuple[list[str], dict[t
         ]
         if charged:
             lines += [
-                f"q{j}, f{j}_{j} = diode_charge(w{j}, {_arguments(base + 3, 7)})",
+                f"if not abs(w{j} - x{j}) < {_NEAR_VOLTS}:",
+                f"    e{j}, f{j}_{j} = diode_charge(w{j}, {_arguments(base + 3, 7)})",
+                f"    x{j} = w{j}",
+                f"q{j} = e{j} + f{j}_{j} * (w{j} - x{j})",
                 f"i{j} += per_second * (q{j} - h{j})",
                 f"g{j}_{j} += per_second * f{j}_{j}",
             ]
@@ -120,7 +133,9 @@ def _evaluate(bjts: int, diodes: int, charged: bool) -> str:
     """Return the function that evaluates all laws on arrays (rare path, many ports)."""
     ports = 2 * bjts + diodes
     lines = [f"w{j} = volts[{j}]" for j in range(ports)]
-    lines += [f"h{j} = held[{j}]" for j in range(ports) if charged]
+    if charged:
+        lines += [f"h{j} = held[{j}]" for j in range(ports)]
+        lines += _no_charges_yet(bjts, diodes)
     laws, slopes = _law_lines(bjts, diodes, charged)
     lines += laws
     lines += [f"amps_out[{j}] = i{j}" for j in range(ports)]
@@ -191,6 +206,11 @@ def _unrolled(bjts: int, diodes: int, charged: bool) -> str:
 def _charge_slopes(bjts: int, diodes: int) -> list[tuple[int, int]]:
     pairs = [(2 * n + r, 2 * n + c) for n in range(bjts) for r, c in ((0, 0), (0, 1), (1, 1))]
     return pairs + [(2 * bjts + n, 2 * bjts + n) for n in range(diodes)]
+
+
+def _no_charges_yet(bjts: int, diodes: int) -> list[str]:
+    lines = [f"x{j} = 1e300\ne{j} = 0.0" for j in range(2 * bjts + diodes)]
+    return lines + [f"f{r}_{c} = 0.0" for r, c in _charge_slopes(bjts, diodes)]
 
 
 def _elimination(ports: int) -> list[str]:
@@ -350,6 +370,7 @@ def advance(
     charges = np.zeros(PORTS)
     critical = np.empty(PORTS)
     unused = np.zeros((PORTS, PORTS))
+OPENING
     for n in range(count):
         constant = table[columns - 1]
         for r in range(rows):
