@@ -170,24 +170,22 @@ def revisions(draw: st.DrawFn) -> Revision:
 
 
 @settings(max_examples=40, deadline=None)
-@given(bounds("A"), bounds("V"), bounds("dB"), masks(), revisions())
+@given(current=bounds("A"), node=bounds("V"), gain=bounds("dB"), mask=masks(), revision=revisions())
 def test_whatever_is_written_is_read_back_equal(
-    current: Limits, node: Limits, gain: Limits, mask: Mask, revision: Revision
+    kinds: Any, current: Limits, node: Limits, gain: Limits, mask: Mask, revision: Revision
 ) -> None:
-    from tests.modelfile.conftest import KINDS, SAMPLE
-
     with tempfile.TemporaryDirectory() as folder:
-        shutil.copytree(SAMPLE / "limits", Path(folder) / "limits")
+        shutil.copytree(Path(__file__).parent / "sample" / "limits", Path(folder) / "limits")
         path = Path(folder) / "limits" / "peat" / "limits.toml"
-        old = load_model(path, KINDS)
+        old = load_model(path, kinds)
         new = {
             ("Supply current", "supply_current"): current,
             ("Bias", "q2_collector"): node,
             ("Gain, fuzz up", "gain"): gain,
             ("Response, fuzz up", "response"): mask,
         }
-        write_limits(path, new, revision, KINDS)
-        read = load_model(path, KINDS)
+        write_limits(path, new, revision, kinds)
+        read = load_model(path, kinds)
     for procedure in read.procedures.values():
         before = old.procedures[procedure.name]
         for step, step_before in zip(procedure.steps, before.steps, strict=True):
