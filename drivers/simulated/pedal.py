@@ -11,7 +11,7 @@ from drivers.circuit.cards import Netlist, Part
 from drivers.circuit.elements import Circuit
 from drivers.circuit.netlist import elaborate, parse_netlist
 
-_CONTACT = "0.05 + (1 - {0})*1e10"
+_CONTACT = "0.05 + (1 - {0})*1e12"
 FIXTURE_PART = "{}__fx"
 """How a part of the fixture is named in the joined circuit, so that it never meets a part of the pedal."""
 
@@ -73,7 +73,8 @@ def join(unit: UnitSpec) -> Netlist:
     }
     pedal = unit.netlist.without_parts(unit.replaced)
     renamed = tuple(
-        replace(part, nodes=tuple(leads.get(node, f"pedal.{node}") for node in part.nodes)) for part in pedal.parts
+        replace(part, nodes=tuple(leads.get(node, f"pedal.{node}") for node in part.nodes))
+        for part in pedal.parts
     )
     fixture = read_fixture()
     marked = tuple(replace(part, name=FIXTURE_PART.format(part.name)) for part in fixture.parts)

@@ -33,7 +33,8 @@ class Terminals(Protocol):
     def drive_supply(self, *, volts: float, limit_amps: float, on: bool) -> None:
         """Set what the supply's regulator tries to do from now on."""
 
-    def supply_terminals(self) -> TerminalState: ...
+    def supply_terminals(self) -> TerminalState:
+        """Return what is at the supply's terminals now."""
 
     def set_relay(self, channel: int, closed: bool) -> None:
         """Command a relay of the switchbox; contacts follow within the relay's own operate time."""

@@ -11,10 +11,22 @@ from drivers.circuit.netlist import parse_netlist
 from drivers.simulated.pedal import Knob, UnitSpec
 from drivers.simulated.world import UnitInFixture, Wiring, World, WorldClock
 
-RELAYS = (
-    "pad_coarse source_line source_coil source_short load_100k load_10k footswitch supply_negative_ground "
-    "supply_positive_ground bleeder meter_rail meter_shunt meter_output tp1"
-).split()
+RELAYS = [
+    "pad_coarse",
+    "source_line",
+    "source_coil",
+    "source_short",
+    "load_100k",
+    "load_10k",
+    "footswitch",
+    "supply_negative_ground",
+    "supply_positive_ground",
+    "bleeder",
+    "meter_rail",
+    "meter_shunt",
+    "meter_output",
+    "tp1",
+]
 CHANNEL = {name: 101 + i for i, name in enumerate(RELAYS)}
 
 PASSIVE = """a divider for a pedal: 10 kOhm in, a divider of 1 MOhm halves on the rail, a dropper and 100 uF
@@ -42,7 +54,9 @@ def make_world(netlist: str = PASSIVE) -> World:
         knobs={"top": Knob("top", 1.0, 0.5)},
         probes={"TP1": "mid"},
     )
-    return World(UnitInFixture(unit, 25.0), Wiring({number: name for name, number in CHANNEL.items()}))
+    world = World(UnitInFixture(unit, 25.0), Wiring({number: name for name, number in CHANNEL.items()}))
+    world.turn_control("top", 0.0)
+    return world
 
 
 def close(world: World, *names: str) -> None:
@@ -62,7 +76,7 @@ def test_a_reservoir_behind_a_resistor_charges_exponentially() -> None:
     close(world, "meter_shunt")
     world.advance(0.05)
     start_s = world.now_s()
-    first = -world.meter_dc_volts(1e-6) / 10.0 * -1.0
+    first = world.meter_dc_volts(1e-6) / 10.0
     world.advance(0.1)
     second = world.meter_dc_volts(1e-6) / 10.0
     idle = 9.0 / 2e6
