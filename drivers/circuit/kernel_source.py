@@ -106,9 +106,9 @@ def _law_lines(bjts: int, diodes: int, charged: bool) -> tuple[list[str], dict[t
     for number, base in enumerate(diode_bases):
         j = 2 * bjts + number
         lines += [
-            f"amps, siemens = junction_current(w{j}, {_arguments(base + 1, 2)})",
-            f"i{j} = amps - shift * w{j}",
-            f"g{j}_{j} = siemens - shift",
+            f"junction_amps, junction_siemens = junction_current(w{j}, {_arguments(base + 1, 2)})",
+            f"i{j} = junction_amps - shift * w{j}",
+            f"g{j}_{j} = junction_siemens - shift",
         ]
         if charged:
             lines += [
