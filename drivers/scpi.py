@@ -30,7 +30,7 @@ NOT_A_NUMBER: Final = 9.91e37
 
 _T = TypeVar("_T")
 _MOST_ERRORS = 32
-_NUMBER = re.compile(r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[Ee][+-]?\d+)?")
+_NUMBER = re.compile(r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[Ee][+-]?\d+)?", re.ASCII)
 _ERROR = re.compile(r'([+-]?\d+)\s*(?:,\s*"?(.*?)"?)?')
 
 
@@ -180,9 +180,9 @@ class ScpiExchange:
         answer = self.ask(message, retry=retry, timeout_s=timeout_s)
         return self._judged(lambda: parse_number(answer, f'{self.where}, "{message}"'))
 
-    def ask_flag(self, message: str) -> bool:
+    def ask_flag(self, message: str, *, retry: bool = True) -> bool:
         """Ask for a state: 0 or 1, ON or OFF. Raises ReplyGarbled, and as `ask`."""
-        answer = self.ask(message).upper()
+        answer = self.ask(message, retry=retry).upper()
         if answer in ("ON", "OFF"):
             return answer == "ON"
         number = self._judged(lambda: parse_number(answer, f'{self.where}, "{message}"'))

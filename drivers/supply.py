@@ -133,7 +133,7 @@ class SupplyDriver:
             try:
                 self._exchange.link.write(self._dialect.commands.output_off)
                 self._clock.sleep(self._dialect.settle.off_s)
-                if not self._off_verified():
+                if self._ask_output(retry=False):
                     raise ReadbackMismatch(f"{self._exchange.where}: switched off but reads back as on")
             except DriverError as error:
                 failure = error
@@ -145,9 +145,7 @@ class SupplyDriver:
 
     def output_is_on(self) -> bool:
         """Return whether the output is on, by read-back (by its voltage where the state cannot be asked)."""
-        if self._dialect.commands.ask_output:
-            return self._exchange.ask_flag(self._dialect.commands.ask_output)
-        return abs(self._exchange.ask_number(self._dialect.commands.measure_volts)) > _OFF_VOLTS
+        return self._ask_output(retry=True)
 
     def read_volts(self) -> Measured:
         """Return the voltage at the terminals. Raises ProtectionTripped, Overload, LinkError."""
@@ -189,8 +187,11 @@ class SupplyDriver:
     def _may_be_on(self) -> bool:
         return self._dialect.commands.ask_output == "" or self.output_is_on()
 
-    def _off_verified(self) -> bool:
-        return not self.output_is_on()
+    def _ask_output(self, *, retry: bool) -> bool:
+        commands = self._dialect.commands
+        if commands.ask_output:
+            return self._exchange.ask_flag(commands.ask_output, retry=retry)
+        return abs(self._exchange.ask_number(commands.measure_volts, retry=retry)) > _OFF_VOLTS
 
     def _forget_errors(self) -> None:
         """Empty the error queue; an old complaint is no reason to doubt an output that reads back as off."""

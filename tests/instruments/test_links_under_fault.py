@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import inspect
 import socket
 import threading
@@ -42,8 +43,8 @@ class ScriptedServer:
         self._listener = socket.create_server(("127.0.0.1", 0))
         self.port = self._listener.getsockname()[1]
         self._clients: list[socket.socket] = []
-        self._thread = threading.Thread(target=self._accept, daemon=True)
-        self._thread.start()
+        self._threads = [threading.Thread(target=self._accept, daemon=True)]
+        self._threads[0].start()
 
     @property
     def resource(self) -> str:
@@ -56,26 +57,25 @@ class ScriptedServer:
             except OSError:
                 return
             self._clients.append(client)
-            threading.Thread(target=self._talk, args=(client,), daemon=True).start()
+            self._threads.append(threading.Thread(target=self._talk, args=(client,), daemon=True))
+            self._threads[-1].start()
 
     def _talk(self, client: socket.socket) -> None:
-        try:
-            for line in client.makefile("rb"):
+        with client, client.makefile("rb") as lines, contextlib.suppress(EOFError, OSError):
+            for line in lines:
                 message = line.decode().strip()
                 self.heard.append(message)
                 answer = IDENTITY if message == "*IDN?" else self.answer(message)
                 if answer:
                     client.sendall(answer)
-        except EOFError:
-            client.shutdown(socket.SHUT_RDWR)
-            client.close()
-        except OSError:
-            return
 
     def close(self) -> None:
+        for one in (self._listener, *self._clients):
+            with contextlib.suppress(OSError):
+                one.shutdown(socket.SHUT_RDWR)
         self._listener.close()
-        for client in self._clients:
-            client.close()
+        for thread in self._threads:
+            thread.join(timeout=2.0)
 
 
 @pytest.fixture

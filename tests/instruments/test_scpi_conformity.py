@@ -282,7 +282,8 @@ def test_between_short_and_long_form_there_is_nothing(word, length):
     [
         ("CURR 0.5", 0.5), ("CURR +.5", 0.5), ("CURR 5E-1", 0.5), ("CURR 5e-1A", 0.5),
         ("CURR 500 MA", 0.5),
-        ("CURR 500mA", 0.5), ("CURR 7 UA", 7e-6), ("CURR 7NA", 7e-9), ("CURR MIN", 0.0), ("CURR maximum", 5.0),
+        ("CURR 500mA", 0.5), ("CURR 7 UA", 7e-6), ("CURR 7NA", 7e-9), ("CURR MIN", 0.0),
+        ("CURR maximum", 5.0),
         ("CURR DEF", 1.0), ("CURR #H3", 3.0), ("CURR #Q4", 4.0), ("CURR #B101", 5.0),
         ("RES 47 KOHM", 47e3), ("RES 2 MOHM", 2e6), ("RES 2 MAOHM", 2e6),
         ("FREQ 2 MHZ", 2e6), ("FREQ 2 KHZ", 2e3), ("FREQ 440HZ", 440.0),
