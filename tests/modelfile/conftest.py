@@ -27,7 +27,7 @@ class NoOptions:
 @dataclass(frozen=True)
 class NodeOptions:
     nodes: tuple[str, ...]
-    settled_below: float
+    settled_within: float
     passes: int
     quick: bool
 
@@ -71,7 +71,7 @@ KINDS: Mapping[str, StepKind] = {
             "Node voltages",
             (
                 Option("nodes", "nodes", ()),
-                Option("settled_below", "quantity", 0.002, "V/s", low=0.0, high=1.0),
+                Option("settled_within", "quantity", 0.002, "V", low=0.0, high=1.0),
                 Option("passes", "count", 1, low=1, high=10),
                 Option("quick", "flag", False),
             ),

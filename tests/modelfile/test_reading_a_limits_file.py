@@ -60,7 +60,7 @@ def test_steps_carry_options_positions_and_limits_in_si_units(peat_file: Path, k
     current, bias, gain, response = load_model(peat_file, kinds).procedures["line"].steps
     assert current.on_fail == "stop" and current.required
     assert current.limits == {"supply_current": Limits(0.0004, 0.0011, "A")}
-    assert bias.options.nodes == ("q1_collector", "q2_collector") and bias.options.settled_below == 0.002
+    assert bias.options.nodes == ("q1_collector", "q2_collector") and bias.options.settled_within == 0.002
     assert bias.limits["q2_collector"] == Limits(-6.0, -3.2, "V", "guarded", 1.0)
     assert gain.options.frequency == 997.0 and gain.options.level == 1e-4
     assert gain.controls == {"fuzz": 1.0, "volume": 1.0}
