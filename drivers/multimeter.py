@@ -7,7 +7,7 @@ from pathlib import Path
 
 from drivers.dialect import AccuracyRow, MultimeterDialect, load_dialect
 from drivers.errors import BackendUnavailable, Overload
-from drivers.link import Address, open_link
+from drivers.link import Address, LinkState, open_link
 from drivers.roles import Clock, Identity, Measured
 from drivers.scpi import ScpiExchange
 
@@ -106,7 +106,7 @@ class MultimeterDriver:
 
     def _configure(self, messages: tuple[str, ...]) -> None:
         link = self._exchange.link
-        if self._configured == (messages, link.recoveries):
+        if self._configured == (messages, link.recoveries) and link.state is LinkState.CLEAN:
             return
         self._configured = None
         self._exchange.command(*messages)

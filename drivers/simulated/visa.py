@@ -7,6 +7,7 @@ them like any other. There is no waiting: a read with nothing to read times out 
 from __future__ import annotations
 
 import itertools
+import threading
 from collections.abc import Mapping
 from typing import Any, Final
 
@@ -64,6 +65,7 @@ class SimulatedVisaLibrary(VisaLibraryBase):
 
     _devices: dict[str, ByteDevice]
     _sessions: dict[int, _Session | None]
+    _lock: threading.RLock
 
     @classmethod
     def create(cls, devices: Mapping[str, ByteDevice]) -> SimulatedVisaLibrary:
@@ -83,6 +85,7 @@ class SimulatedVisaLibrary(VisaLibraryBase):
     def _init(self) -> None:
         self._devices = {}
         self._sessions = {}
+        self._lock = threading.RLock()  # the devices share one world
 
     def _add(self, session: _Session | None) -> Any:
         number = next(_numbers)
@@ -125,12 +128,14 @@ class SimulatedVisaLibrary(VisaLibraryBase):
 
     def write(self, session: Any, data: bytes) -> tuple[int, StatusCode]:
         """Hand bytes to the device."""
-        self._find(session).write(data)
+        with self._lock:
+            self._find(session).write(data)
         return len(data), self.handle_return_value(session, StatusCode.success)
 
     def read(self, session: Any, count: int) -> tuple[bytes, StatusCode]:
         """Take bytes from the device; raises VisaIOError (timeout) when there are none."""
-        data, status = self._find(session).read(count)
+        with self._lock:
+            data, status = self._find(session).read(count)
         return data, self.handle_return_value(session, status)
 
     def clear(self, session: Any) -> StatusCode:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import contextlib
 import inspect
 import socket
+import statistics
 import threading
 import time
 from collections.abc import Callable, Iterator
@@ -30,7 +31,7 @@ from drivers.foreign import map_foreign_error, mapped_errors
 from drivers.link import LinkSettings, LinkState, MessageLink, open_link, open_serial_link, open_visa_link
 from drivers.scpi import ScpiExchange
 
-QUICK = LinkSettings(timeout_s=0.15, quiet_s=0.02)
+QUICK = LinkSettings(timeout_s=0.3, quiet_s=0.03)
 IDENTITY = b"maker,scripted,0,1\n"
 
 
@@ -150,7 +151,7 @@ def test_an_instrument_that_hangs_up_is_down_not_slow(link_to):
 def test_a_late_answer_is_never_given_to_the_next_question(link_to):
     def late(message: str) -> bytes:
         if message == "SLOW?":
-            time.sleep(0.25)
+            time.sleep(0.45)
         return message.encode() + b"\n"
 
     link = link_to(late)
@@ -163,7 +164,7 @@ def test_a_late_answer_is_never_given_to_the_next_question(link_to):
 
 
 def test_a_late_answer_is_found_out_even_when_nobody_has_asked_for_the_identity_before(link_to):
-    link = link_to(lambda message: time.sleep(0.25) or b"late\n" if message == "SLOW?" else b"in time\n")
+    link = link_to(lambda message: time.sleep(0.45) or b"late\n" if message == "SLOW?" else b"in time\n")
     with pytest.raises(LinkTimeout):
         link.query("SLOW?")
     assert link.query("QUICK?") == "in time"
@@ -327,12 +328,14 @@ def test_small_messages_do_not_wait_for_each_other(serve):
     # 44 ms per write-write-query were measured with Nagle's algorithm on; without it well under a millisecond
     server = serve(lambda message: b"1\n" if message.endswith("?") else None)
     link = open_visa_link(server.resource, library="@py")
-    start_s = time.perf_counter()
-    for _ in range(20):
+    took_s = []
+    for _ in range(21):
+        start_s = time.perf_counter()
         link.write("A 1")
         link.write("B 1")
         link.query("READ?")
-    assert (time.perf_counter() - start_s) / 20 < 0.02
+        took_s.append(time.perf_counter() - start_s)
+    assert statistics.median(took_s) < 0.02
     link.close()
 
 

@@ -72,6 +72,19 @@ def test_readings_agree_with_the_world_within_their_uncertainty_for_every_instru
     assert inside == 100
 
 
+def test_the_configuration_is_sent_again_after_the_link_was_recovered(bench, meter):
+    meter.read_dc_volts(expect_volts=5.0)
+    bench.multimeter.reset()  # as after a power cut
+    meter._exchange.link.mark_dirty()
+    meter.read_dc_volts(expect_volts=5.0)
+    meter.read_dc_volts(expect_volts=5.0)
+    told = [entry.text for entry in bench.multimeter.journal]
+    assert told.count("CONF:VOLT:DC 10") == 2
+    assert [text for text in told if text[:4] in ("CONF", "READ")] == ["CONF:VOLT:DC 10", "READ?"] * 2 + [
+        "READ?"
+    ]
+
+
 def test_a_meter_without_ohms_says_so(bench, in_process):
     dialect = load_dialect("scpi_multimeter", MultimeterDialect)
     dialect = dataclasses.replace(dialect, commands=dataclasses.replace(dialect.commands, ohms_auto=""))
