@@ -6,6 +6,8 @@
     ├── BadNetlist         a netlist cannot be used; carries every fault found, each with file and line
     ├── BadExpression      an expression cannot be read or has no value
     ├── BadPartFault       the words of a part fault are not understood or name no part of the netlist
+    ├── BadSpread          a tolerance that cannot be drawn
+    ├── BadSurvey          a question that cannot be put to a circuit
     ├── UnknownName        a node, source, part or parameter that the circuit does not have
     ├── NoConvergence      the operating point was not found
     └── NumericBreakdown   a solution is not finite
@@ -54,6 +56,14 @@ class BadExpression(CircuitError):
 
 class BadPartFault(CircuitError):
     """Words that name no fault, or a fault that this netlist cannot have."""
+
+
+class BadSpread(CircuitError):
+    """A tolerance that cannot be drawn."""
+
+
+class BadSurvey(CircuitError):
+    """A question that cannot be put to a circuit: no driving source, a senseless frequency or amplitude."""
 
 
 class UnknownName(CircuitError):

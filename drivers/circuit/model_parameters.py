@@ -131,6 +131,8 @@ def _range_fault(name: str, value: float) -> str:
     positive = ("is", "n", "nf", "nr", "ne", "nc", "bf", "br", "vj", "vje", "vjc", "eg")
     if name in positive and value <= 0.0:
         return f"{name.upper()}={value:g} must be greater than zero"
+    if name == "m" and value > 0.9:
+        return f"M={value:g} must lie from 0 to 0.9 (SPICE limits it there)"
     if name in ("m", "mje", "mjc", "fc") and not 0.0 <= value < 1.0:
         return f"{name.upper()}={value:g} must lie from 0 to below 1"
     signed = ("xti", "xtb", "tnom", "af")

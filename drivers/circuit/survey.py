@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from drivers.circuit.cards import Netlist
 from drivers.circuit.elaboration import elaborate
 from drivers.circuit.elements import Circuit, CurrentSource, VoltageSource
-from drivers.circuit.errors import CircuitError, UnknownName, nearest_names
+from drivers.circuit.errors import BadSurvey, UnknownName, nearest_names
 from drivers.circuit.linear import visible_nodes
 from drivers.circuit.operating_point import solve_operating_point
 from drivers.circuit.small_signal import Node, linearise, response
@@ -31,10 +31,6 @@ _FIRST_RUN_S = 1.0
 _LONGEST_RUN_S = 64.0
 _SETTLED_RATIO = 2e-5
 _SETTLED_VOLTS = 1e-12
-
-
-class BadSurvey(CircuitError):
-    """A question that cannot be put to this circuit."""
 
 
 @dataclass(frozen=True)

@@ -21,7 +21,8 @@ ELEMENTARY_CHARGE_C = 1.602176634e-19
 ZERO_CELSIUS_K = 273.15
 _REFERENCE_K = 300.15
 _SILICON_GAP_AT_REFERENCE_EV = 1.1150877
-_LARGEST_FC = 0.95
+_LARGEST_DIODE_FC = 0.95
+_LARGEST_BJT_FC = 0.9999
 
 DIODE_DEFAULTS: Mapping[str, float] = {
     "is": 1e-14,
@@ -133,7 +134,7 @@ def diode_law(given: Mapping[str, float], *, area: float, celsius: float, tnom_c
         n=p["n"],
         vt_volts=shift.vt_volts,
         rs_ohms=p["rs"] / area,
-        charge=JunctionCharge(area * cj, vj, p["m"], min(p["fc"], _LARGEST_FC), p["tt"]),
+        charge=JunctionCharge(area * cj, vj, p["m"], min(p["fc"], _LARGEST_DIODE_FC), p["tt"]),
     )
 
 
@@ -155,7 +156,7 @@ def bjt_law(
     gain = math.exp(shift.log_ratio * p["xtb"])
     cje, vje = shift.depletion(p["cje"], p["vje"], p["mje"])
     cjc, vjc = shift.depletion(p["cjc"], p["vjc"], p["mjc"])
-    fc = min(p["fc"], _LARGEST_FC)
+    fc = min(p["fc"], _LARGEST_BJT_FC)
     return BjtLaw(
         polarity=polarity,
         is_amps=area * p["is"] * math.exp(exponent),

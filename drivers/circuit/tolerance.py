@@ -15,15 +15,11 @@ from statistics import NormalDist
 from typing import Literal
 
 from drivers.circuit.cards import Netlist, Part
-from drivers.circuit.errors import CircuitError, UnknownName, nearest_names
+from drivers.circuit.errors import BadSpread, UnknownName, nearest_names
 from drivers.circuit.model_parameters import canonical_name, default_value, known_parameters
 
 _PARAM = "param:"
 _CUT_SIGMA = 3.5
-
-
-class BadSpread(CircuitError):
-    """A spread that cannot be drawn."""
 
 
 @dataclass(frozen=True)

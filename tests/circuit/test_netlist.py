@@ -5,6 +5,8 @@ from __future__ import annotations
 from pathlib import Path
 
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from drivers.circuit.elements import (
     Bjt,
@@ -319,3 +321,33 @@ def test_edits_leave_the_netlist_they_start_from_alone() -> None:
     assert changed.model("ge1@q1").parameter("bf", "") == "30"
     with pytest.raises(UnknownName, match="no part 'Vsup'"):
         changed.part("Vsup")
+
+
+@given(
+    st.lists(
+        st.tuples(
+            st.integers(0, 40), st.sampled_from(["delete", "double", "cut", "stir"]), st.integers(0, 60)
+        ),
+        max_size=5,
+    ),
+    st.text(max_size=20),
+)
+@settings(max_examples=200, deadline=None)
+def test_whatever_a_file_holds_the_answer_is_a_circuit_or_a_list_of_faults(
+    edits: list[tuple[int, str, int]], stray: str
+) -> None:
+    lines = PEAT.read_text(encoding="utf-8").splitlines()
+    for number, kind, column in edits:
+        line = lines[number % len(lines)]
+        changed = {
+            "delete": [],
+            "double": [line, line],
+            "cut": [line[: column % (len(line) + 1)]],
+            "stir": [line[: column % (len(line) + 1)] + stray],
+        }[kind]
+        lines[number % len(lines) : number % len(lines) + 1] = changed
+    try:
+        assert elaborate(parse_netlist("\n".join(lines), "f.cir")).elements
+    except BadNetlist as bad:
+        assert bad.faults
+        assert all(str(fault).startswith("f.cir:") and "\n" not in str(fault) for fault in bad.faults)

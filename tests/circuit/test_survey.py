@@ -11,9 +11,9 @@ import pytest
 from scipy.interpolate import CubicSpline
 from scipy.special import iv
 
-from drivers.circuit.errors import UnknownName
+from drivers.circuit.errors import BadSurvey, UnknownName
 from drivers.circuit.netlist import parse_netlist, read_netlist
-from drivers.circuit.survey import BadSurvey, Sine, survey
+from drivers.circuit.survey import Sine, survey
 from drivers.circuit.temperature import thermal_volts
 
 DECKS = Path(__file__).parent / "decks"
@@ -111,7 +111,7 @@ def test_a_question_that_makes_no_sense_is_one_clear_line(
 
 def test_without_an_ac_amplitude_the_driving_source_must_be_named() -> None:
     quiet = parse_netlist(DIVIDER.replace(" AC 2", ""))
-    with pytest.raises(BadSurvey, match="no source has an AC amplitude; say which one drives .accepted: Vin"):
+    with pytest.raises(BadSurvey, match=r"no source has an AC amplitude; say which one drives .accepted: Vin"):
         survey(quiet, "out", hz=[100.0])
     two = parse_netlist(DIVIDER.replace(".end", "V2 x 0 AC 1\nR3 x out 1k\n.end"))
     with pytest.raises(BadSurvey, match=r"several sources have an AC amplitude.*Vin, V2"):

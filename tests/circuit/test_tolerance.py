@@ -9,9 +9,9 @@ import numpy as np
 import pytest
 
 from drivers.circuit.elements import Resistor
-from drivers.circuit.errors import UnknownName
+from drivers.circuit.errors import BadSpread, UnknownName
 from drivers.circuit.netlist import Netlist, elaborate, parse_netlist, read_netlist
-from drivers.circuit.tolerance import BadSpread, Spread, draw_probability, draw_unit
+from drivers.circuit.tolerance import Spread, draw_probability, draw_unit
 
 PAIR = Path(__file__).parent / "decks" / "germanium_pair.cir"
 
