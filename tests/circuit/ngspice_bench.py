@@ -11,6 +11,8 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
+from drivers.circuit.netlist import Netlist
+
 DECKS = Path(__file__).parent / "decks"
 TIGHT = "reltol=1e-7 abstol=1e-15 vntol=1e-9 chgtol=1e-17"
 
@@ -122,6 +124,21 @@ class Ngspice:
 
 def _bare(name: str) -> str:
     return name[2:-1] if name.startswith("v(") else name
+
+
+def spell_out(netlist: Netlist) -> str:
+    """Return a netlist (drawn, or with faults planted) as text for ngspice, which knows no ``#`` and ``@`` in names."""
+    lines = [netlist.title]
+    for param in netlist.params:
+        lines.append(f".param {param.name}={{{param.expression}}}")
+    for part in netlist.parts:
+        value = f"area={{{part.value}}}" if part.kind in "dq" else f"{{{part.value}}}"
+        words = [part.name, *part.nodes, part.model, value]
+        lines.append(" ".join(word.replace("#", "_").replace("@", "_") for word in words if word))
+    for model in netlist.models:
+        parameters = " ".join(f"{name}={{{expression}}}" for name, expression in model.parameters)
+        lines.append(f".model {model.name.replace('@', '_')} {model.kind}({parameters})")
+    return "\n".join([*lines, ".end", ""])
 
 
 def read_raw(path: Path) -> Table:

@@ -3,14 +3,17 @@
 from __future__ import annotations
 
 from pathlib import Path
+from typing import Any
 
 import pytest
+from ngspice_bench import spell_out
 
 from drivers.circuit.elements import Bjt, Circuit, Resistor
 from drivers.circuit.errors import BadPartFault
 from drivers.circuit.faults import apply_faults, parse_fault
 from drivers.circuit.netlist import Netlist, elaborate, parse_netlist, read_netlist
 from drivers.circuit.operating_point import solve_operating_point
+from drivers.circuit.tolerance import Spread, draw_unit
 
 DECKS = Path(__file__).parent / "decks"
 PAIR = DECKS / "germanium_pair.cir"
@@ -87,6 +90,25 @@ def test_every_fault_of_a_feedback_pair_can_be_said_and_leaves_a_circuit_that_so
     assert good.elements != bad.elements
     solution = solve_operating_point(bad).node_volts
     assert all(abs(value) < 9.5 for value in solution.values())
+
+
+@pytest.mark.ngspice
+@pytest.mark.parametrize(
+    ("fault", "words"), FAULTS_OF_A_FEEDBACK_PAIR, ids=[f for f, _ in FAULTS_OF_A_FEEDBACK_PAIR]
+)
+def test_a_unit_with_a_fault_has_the_node_voltages_that_ngspice_gives_it(
+    fault: str, words: list[str], ngspice: Any, tmp_path: Path
+) -> None:
+    spreads = [Spread("R*", "value", "uniform", 0.05), Spread("Q*", "isc", "lognormal", 0.3)]
+    unit = draw_unit(read_netlist(PAIR), spreads, fault)
+    netlist = apply_faults(unit, [parse_fault(said) for said in words])
+    deck = tmp_path / "unit.cir"
+    deck.write_text(spell_out(netlist), encoding="utf-8")
+    wanted = ngspice.op(deck, celsius=30.0)
+    found = solve_operating_point(elaborate(netlist, celsius=30.0)).node_volts
+    for node in read_netlist(PAIR).nodes:
+        # SOURCE: ngspice 39 .op; the bar is 0.1 mV
+        assert found[node] == pytest.approx(wanted[node], abs=1e-4), node
 
 
 # How the faults show at direct current: what the trade knows about such a pair, from the supply at -9 V.
