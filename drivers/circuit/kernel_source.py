@@ -325,14 +325,14 @@ def rescue(acc, feedback, parameters, held, before, shift, per_second, found, am
                 return False
     return False'''
 
-_RESCUE = '''if not converged:
+_RESCUE = """if not converged:
     for r in range(PORTS):
         before[r] = state[states + r]
         held[r] = state[states + 2 * PORTS + r]
     if not rescue(acc, feedback, parameters, held, before, shift, per_second, found, amps, charges):
-        return n'''
+        return n"""
 
-_BY_ARRAYS = '''for r in range(PORTS):
+_BY_ARRAYS = """for r in range(PORTS):
     before[r] = state[states + r]
     held[r] = state[states + 2 * PORTS + r]
     found[r] = 2.0 * before[r] - state[states + PORTS + r]
@@ -347,7 +347,7 @@ for j in range(PORTS):
         acc[r] += feedback[j, r] * amps[j]
     state[states + PORTS + j] = before[j]
     state[states + j] = found[j]
-    state[states + 2 * PORTS + j] = (1.0 + remember) * charges[j] - remember * held[j]'''
+    state[states + 2 * PORTS + j] = (1.0 + remember) * charges[j] - remember * held[j]"""
 
 _ADVANCE = '''@njit(
     f"int64(int64, {_MATRIX}, {_MATRIX}, {_MATRIX}, {_VECTOR}, {_VECTOR}, {_MATRIX}, "

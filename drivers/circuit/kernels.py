@@ -101,7 +101,9 @@ def _load(stem: str, source: str, *, seconds: int) -> ModuleType:
     except OSError:
         path = _write_source(_temporary_folder(), name, source)
     if compile_notice is not None and not any(path.parent.glob(f"__pycache__/{path.stem}.*.nbi")):
-        compile_notice(f"compiling the circuit kernel, once per machine and kind of circuit, about {seconds} s")
+        compile_notice(
+            f"compiling the circuit kernel, once per machine and kind of circuit, about {seconds} s"
+        )
     try:
         return _import_file(path)
     except (RuntimeError, OSError):  # numba finds no place for machine code beside the source
@@ -131,10 +133,9 @@ def _digest(source: str) -> str:
 def _write_source(folder: Path, name: str, source: str) -> Path:
     """Write the source unless it is there; another process may do the same at the same time."""
     path = folder / f"{name}.py"
-    if path.exists():
-        # numba ties machine code to the file's time: an intact file must not be written again
-        if path.read_text(encoding="utf-8") == source:
-            return path
+    # numba ties machine code to the file's time: an intact file must not be written again
+    if path.exists() and path.read_text(encoding="utf-8") == source:
+        return path
     folder.mkdir(parents=True, exist_ok=True)
     descriptor, temporary = tempfile.mkstemp(dir=folder, prefix=name, suffix=".part")
     with os.fdopen(descriptor, "w", encoding="utf-8", newline="\n") as stream:

@@ -202,9 +202,7 @@ class _Solver:
         matrix = self._matrix + self._junctions @ slopes @ self._junctions.T
         return solve_named(matrix, level * self._sources - self._junctions @ amps, self._network.layout)
 
-    def _newton(
-        self, start: FloatArray, gmin: float, level: float
-    ) -> tuple[FloatArray, FloatArray] | None:
+    def _newton(self, start: FloatArray, gmin: float, level: float) -> tuple[FloatArray, FloatArray] | None:
         port_volts = np.array(start, dtype=np.float64)
         for _ in range(_ROUNDS):
             self.rounds += 1
@@ -230,7 +228,9 @@ class _Devices:
         values = network.parameters.tolist()
         split = BJT_PARAMETERS * len(layout.bjts)
         self._bjts = [values[at : at + BJT_PARAMETERS] for at in range(0, split, BJT_PARAMETERS)]
-        self._diodes = [values[at : at + DIODE_PARAMETERS] for at in range(split, len(values), DIODE_PARAMETERS)]
+        self._diodes = [
+            values[at : at + DIODE_PARAMETERS] for at in range(split, len(values), DIODE_PARAMETERS)
+        ]
         self.critical = np.array(
             [v for bjt in self._bjts for v in bjt[:2]] + [diode[0] for diode in self._diodes]
         )

@@ -324,7 +324,9 @@ class Simulator:
         """
         self._leave_run()
         row = self._input_row(inputs)
-        spans = 1 if max_step is None else max(1, math.ceil(_checked_time(duration_s) / max_step * (1 - 1e-12)))
+        spans = (
+            1 if max_step is None else max(1, math.ceil(_checked_time(duration_s) / max_step * (1 - 1e-12)))
+        )
         longest_s = _checked_time(duration_s) / spans
         outputs = np.empty((1, len(self._outputs)))
         level = self._first_level(longest_s)
@@ -343,7 +345,7 @@ class Simulator:
             elif verdict > 0 and level > 0 and at % (2 * size) == 0:
                 level -= 1
         self._settling_step_s = longest_s / (1 << level)
-        return outputs[0]
+        return np.asarray(outputs[0])
 
     def _first_level(self, longest_s: float) -> int:
         first_s = max(_FIRST_STEP_S, self._settling_step_s)
@@ -393,7 +395,9 @@ class Simulator:
         """
         samples = np.asarray(samples, dtype=np.float64)
         if samples.ndim != 2 or samples.shape[1] != len(self._inputs) or not samples.shape[0]:
-            raise ValueError(f"samples of shape (frames, {len(self._inputs)}) are wanted, got {samples.shape}")
+            raise ValueError(
+                f"samples of shape (frames, {len(self._inputs)}) are wanted, got {samples.shape}"
+            )
         if oversample not in FACTORS:
             raise ValueError(f"oversample is one of {', '.join(map(str, FACTORS))}, got {oversample}")
         if not np.isfinite(samples).all():
@@ -439,7 +443,9 @@ class Simulator:
         while done < inputs.shape[0]:
             step = self._values.reduced(half_step_s, trapezoidal=True)
             bulk = inputs.shape[0] - done - 1
-            taken = self._values.advance(step, inputs[done : done + bulk], self._flat, outputs[done : done + bulk])
+            taken = self._values.advance(
+                step, inputs[done : done + bulk], self._flat, outputs[done : done + bulk]
+            )
             done += taken
             self._flat_before = self._flat.copy()
             if taken == bulk:
