@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import contextlib
+import dataclasses
 import inspect
 import socket
 import statistics
@@ -168,6 +169,17 @@ def test_a_late_answer_is_found_out_even_when_nobody_has_asked_for_the_identity_
     with pytest.raises(LinkTimeout):
         link.query("SLOW?")
     assert link.query("QUICK?") == "in time"
+
+
+def test_without_a_question_that_confirms_a_late_answer_is_at_least_read_away(serve):
+    server = serve(lambda message: time.sleep(0.45) or b"late\n" if message == "SLOW?" else b"in time\n")
+    settings = dataclasses.replace(QUICK, confirm="")
+    link = open_visa_link(server.resource, library="@py", settings=settings)
+    with pytest.raises(LinkTimeout):
+        link.query("SLOW?")
+    time.sleep(0.4)
+    assert link.query("QUICK?") == "in time"
+    link.close()
 
 
 def test_an_answer_that_nobody_asked_for_is_a_desync_and_the_link_recovers(link_to):
