@@ -147,8 +147,9 @@ ONE_FAULT = {
     "an unknown parameter": ('param = "fuzz"', 'param = "fizz"', 'no .param "fizz"'),
     "a replaced part unknown": ('"Rsrc", ', '"Rscr", ', 'no part "Rscr"'),
     "a spread of no part": ('part = "R*"', 'part = "L*"', 'no part "L*" in circuit.cir'),
+    "a spread of no .param": ('part = "R*"', 'part = "param:fizz"', 'did you mean "param:fuzz"?'),
     "a spread of no parameter": ('parameter = "bf"', 'parameter = "bff"', '"Q1" has no "bff"'),
-    "a spread too wide": ('"5 %"', '"500 %"', "accepted is 0 % to 95 %"),
+    "a spread too wide": ('"5 %"', '"500 %"', "accepted is 0 % to 99 %"),
     "a date in quotes": ("date = 2026-11-30", 'date = "2026-11-30"', "a date without quotes"),
     "a future revision in the history": ("number = 2", "number = 3", "not an earlier revision than 3"),
     "another format": ("format = 1", "format = 2", "this program reads format 1"),
@@ -185,6 +186,17 @@ def test_faults_of_the_netlist_come_with_its_own_lines(peat_file: Path, kinds: A
         load_model(peat_file, kinds)
     (fault,) = caught.value.faults
     assert (fault.file, fault.line) == (netlist, 9)
+
+
+@pytest.mark.parametrize(
+    ("part", "parameter"),
+    [("param:fuzz", "value"), ("q*", "is"), ("Q2", "br"), ("Q1", "value"), ("C*", "value")],
+)
+def test_a_spread_may_move_values_params_and_parameters_of_models(
+    part: str, parameter: str, peat_file: Path, kinds: Any
+) -> None:
+    edit(peat_file, {'part = "Q1"': f'part = "{part}"', 'parameter = "bf"': f'parameter = "{parameter}"'})
+    assert load_model(peat_file, kinds).spreads[1] == PartSpread(part, parameter, "lognormal", 0.2)
 
 
 def test_a_model_without_a_circuit_is_complete(peat_file: Path, kinds: Any) -> None:

@@ -63,3 +63,13 @@ def test_every_step_kind_is_read_with_its_defaults(tmp_path: Path) -> None:
         for option in kind.options:
             if option.default is not None:
                 assert getattr(step.options, option.name) == option.default
+
+
+def test_the_sample_file_is_good_for_the_programs_own_step_kinds() -> None:
+    model = load_model(Path(__file__).parent / "sample" / "limits" / "peat" / "limits.toml")
+    assert [step.kind for step in model.procedures["line"].steps] == [
+        "supply_current",
+        "node_voltages",
+        "gain",
+        "frequency_response",
+    ]
