@@ -279,12 +279,7 @@ def test_ctrl_c_in_the_bench_closes_the_run_as_stopped(line: Line, where: str) -
     assert result.verdict is Verdict.STOPPED
     assert result.reason == "stopped with Ctrl-C"
     assert line.journal.closed == [result]
-    assert line.log[-4:] == [
-        "bench.safe_state",
-        "told.SafeStateReached",
-        "journal.close_run",
-        "told.RunClosed",
-    ] or (not line.bench.powered)
+    assert not line.bench.powered
 
 
 def test_ctrl_c_while_the_outputs_are_switched_off_does_not_keep_them_on(line: Line) -> None:
