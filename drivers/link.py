@@ -12,7 +12,7 @@ from collections.abc import Callable
 from enum import Enum
 from typing import TYPE_CHECKING, TypeVar
 
-from drivers.errors import LinkDesync, LinkDown, LinkError, LinkTimeout, WrongInstrument
+from drivers.errors import LinkDesync, LinkDown, LinkTimeout, WrongInstrument
 from drivers.wire import Address, LinkSettings, SerialAddress, VisaAddress, Wire, open_wire
 
 if TYPE_CHECKING:
@@ -236,7 +236,6 @@ def open_serial_link(
 
 __all__ = [
     "Address",
-    "LinkError",
     "LinkSettings",
     "LinkState",
     "MessageLink",

@@ -13,7 +13,7 @@ import time
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any, Protocol
 
-from drivers.errors import BackendUnavailable, LinkDown, LinkTimeout
+from drivers.errors import BackendUnavailable, DriverError, LinkDown, LinkTimeout
 from drivers.foreign import mapped_errors
 
 if TYPE_CHECKING:
@@ -118,17 +118,24 @@ class VisaWire:
 
     def _open(self) -> None:
         manager = _open_manager(self._address)
-        with mapped_errors(self.where):
-            milliseconds = round(self._settings.timeout_s * 1000)
-            self._resource = manager.open_resource(self.where, open_timeout=milliseconds)
-            self._resource.timeout = milliseconds
-            self._resource.read_termination = self._settings.read_termination[-1:] or None
-            if self.where.upper().startswith("ASRL"):
-                self._resource.baud_rate = self._settings.baud
-            self._find_socket(manager)
+        try:
+            with mapped_errors(self.where):
+                self._set_up(manager)
+        except DriverError:
+            self.close()
+            raise
         if self.dead():
             self.close()
             raise LinkDown(f"{self.where}: nobody answers there; check power, cable and address")
+
+    def _set_up(self, manager: Any) -> None:
+        milliseconds = round(self._settings.timeout_s * 1000)
+        self._resource = manager.open_resource(self.where, open_timeout=milliseconds)
+        self._resource.timeout = milliseconds
+        self._resource.read_termination = self._settings.read_termination[-1:] or None
+        if self.where.upper().startswith("ASRL"):
+            self._resource.baud_rate = self._settings.baud
+        self._find_socket(manager)
 
     def _find_socket(self, manager: Any) -> None:
         """Find the plain socket under pyvisa-py, which alone can tell a dead line from a slow one."""

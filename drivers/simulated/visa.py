@@ -38,6 +38,7 @@ class _Session:
         self.unread = bytearray()
 
     def write(self, data: bytes) -> None:
+        self.unread.clear()  # a new message ends the answer to the last one (IEEE 488.2, 6.3.2.3)
         self.device.receive(data)
         if self.attributes[ResourceAttribute.send_end_enabled]:
             self.device.end_of_message()
