@@ -73,6 +73,16 @@ def test_the_old_revision_moves_into_the_history(peat_file: Path, kinds: Any) ->
     assert load_model(peat_file, kinds).revision.number == 5
 
 
+def test_a_first_history_stands_apart_at_the_end(peat_file: Path, kinds: Any) -> None:
+    text = peat_file.read_text(encoding="utf-8")
+    start, end = text.index("[[history]]"), text.index("[supply]")
+    peat_file.write_text(text[:start] + text[end:], encoding="utf-8")
+    write_limits(peat_file, {}, NEXT, kinds)
+    after = peat_file.read_text(encoding="utf-8")
+    assert '\n\n[[history]]\nnumber = 3\nauthor = "A. Fell"\n' in after[after.index("[procedures.short]") :]
+    assert load_model(peat_file, kinds).revision == NEXT
+
+
 def test_a_step_that_stands_in_two_procedures_is_set_in_both(peat_file: Path, kinds: Any) -> None:
     limits = Limits(None, 0.002, "A")
     write_limits(peat_file, {("Supply current", "supply_current"): limits}, NEXT, kinds)
