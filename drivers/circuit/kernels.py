@@ -22,7 +22,8 @@ from pathlib import Path
 from types import ModuleType
 from typing import Any
 
-from drivers.circuit.kernel_source import FILTER_SOURCE, kernel_source
+from drivers.circuit.kernel_source import kernel_source
+from drivers.circuit.kernel_text import FILTER_SOURCE
 
 compile_notice: Callable[[str], None] | None = None
 """Told, in words for a person, before a kernel is compiled for the first time on a machine."""

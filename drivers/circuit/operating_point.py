@@ -22,11 +22,11 @@ from drivers.circuit.assembly import (
     FloatArray,
     Network,
     build_network,
-    solve_named,
 )
 from drivers.circuit.devices import bjt_currents, junction_current
 from drivers.circuit.elements import Circuit
 from drivers.circuit.errors import CircuitError, NoConvergence
+from drivers.circuit.reduction import solve_named
 
 _CONVERGED_VOLTS = 1e-10
 _CONVERGED_RATIO = 1e-11

@@ -13,26 +13,22 @@ from dataclasses import dataclass
 import numpy as np
 
 from drivers.circuit.assembly import (
-    SHIFT_SIEMENS,
     FloatArray,
     Layout,
-    Network,
     Output,
-    Reduced,
     build_network,
     junction_charges,
     lay_out,
-    reduce_network,
     signature_of,
 )
 from drivers.circuit.elements import Circuit
 from drivers.circuit.errors import CircuitError, NoConvergence
-from drivers.circuit.kernels import Kernel, KernelKey, load_kernel
 from drivers.circuit.operating_point import solve_operating_point
+from drivers.circuit.reduction import Reduced
 from drivers.circuit.resample import FACTORS, decimate, half_length, interpolate
+from drivers.circuit.stepping import CircuitValues, Tolerances
 
 _CIRCUITS_KEPT = 24
-_STEPS_KEPT = 64
 _CHUNK_FRAMES = 4096
 _BRIDGE_STEPS = 64
 
@@ -43,7 +39,7 @@ _RELATIVE_TOLERANCE = 1e-4
 _ANY = 1e300
 _FIRST_STEP_S = 1e-5
 _FINEST = 40  # halvings of the longest step of a settling
-_SHORTEST_STEP_S = 1e-9  # what moves faster has moved: shorter steps are for convergence alone
+_SHORTEST_STEP_S = 1e-6  # what moves faster has moved: shorter steps are for convergence alone
 
 
 @dataclass(frozen=True, eq=False)
@@ -69,46 +65,6 @@ class Trial:
     flat: FloatArray
 
 
-class _Values:
-    """A circuit with one set of values, and the steps that have been reduced for it."""
-
-    def __init__(self, circuit: Circuit, network: Network) -> None:
-        layout = network.layout
-        self.circuit = circuit
-        self.network = network
-        self.shift = SHIFT_SIEMENS - network.gmin_siemens
-        self.kernel: Kernel = load_kernel(
-            KernelKey(bjts=len(layout.bjts), diodes=len(layout.diodes), charged=network.charged)
-        )
-        self._steps: dict[tuple[float, bool], Reduced] = {}
-
-    def reduced(self, half_step_s: float, *, trapezoidal: bool) -> Reduced:
-        key = (half_step_s, trapezoidal)
-        found = self._steps.get(key)
-        if found is None:
-            if len(self._steps) >= _STEPS_KEPT:
-                self._steps.clear()
-            found = reduce_network(self.network, half_step_s, trapezoidal=trapezoidal)
-            self._steps[key] = found
-        return found
-
-    def advance(self, step: Reduced, inputs: FloatArray, flat: FloatArray, outputs: FloatArray) -> int:
-        """Take one step per row of inputs; return how many converged."""
-        return self.kernel.advance(
-            inputs.shape[0],
-            inputs,
-            step.map,
-            step.feedback,
-            self.network.parameters,
-            flat,
-            outputs,
-            step.per_second,
-            step.remember,
-            self.shift,
-            self.network.is_capacitor.size,
-        )
-
-
 class Simulator:
     """A circuit in time.
 
@@ -132,7 +88,7 @@ class Simulator:
         self._inputs = tuple(inputs)
         self._outputs = tuple(outputs)
         self._layout: Layout = lay_out(circuit)
-        self._known: dict[Circuit, _Values] = {}
+        self._known: dict[Circuit, CircuitValues] = {}
         self._values = self._values_of(circuit)
         network = self._values.network
         self._output_tolerances = np.array(
@@ -219,7 +175,7 @@ class Simulator:
         self._settling_step_s = 0.0
         self._charge_junctions()
 
-    def _values_of(self, circuit: Circuit) -> _Values:
+    def _values_of(self, circuit: Circuit) -> CircuitValues:
         found = self._known.get(circuit)
         if found is not None:
             return found
@@ -228,7 +184,7 @@ class Simulator:
         if len(self._known) >= _CIRCUITS_KEPT:
             del self._known[next(iter(self._known))]
         network = build_network(circuit, inputs=self._inputs, outputs=self._outputs, layout=self._layout)
-        self._known[circuit] = values = _Values(circuit, network)
+        self._known[circuit] = values = CircuitValues(circuit, network)
         return values
 
     def _check_wiring(self, circuit: Circuit) -> None:
@@ -352,25 +308,17 @@ class Simulator:
         return min(_FINEST - 1, max(0, math.ceil(math.log2(longest_s / first_s) - 1e-9)))
 
     def _settle_at(self, step_s: float, count: int, row: FloatArray, outputs: FloatArray) -> tuple[int, int]:
-        values = self._values
-        whole = values.reduced(step_s, trapezoidal=False)
-        half = values.reduced(step_s / 2.0, trapezoidal=False)
-        return values.kernel.settle(
+        return self._values.settle(
+            step_s,
             count,
             row,
-            whole.map,
-            whole.feedback,
-            half.map,
-            half.feedback,
-            values.network.parameters,
             self._flat,
             outputs,
-            whole.per_second,
-            self._state_tolerances,
-            self._output_tolerances,
-            _RELATIVE_TOLERANCE if step_s > _SHORTEST_STEP_S else _ANY,
-            values.shift,
-            values.network.is_capacitor.size,
+            Tolerances(
+                self._state_tolerances,
+                self._output_tolerances,
+                _RELATIVE_TOLERANCE if step_s > _SHORTEST_STEP_S else _ANY,
+            ),
         )
 
     # --- runs
