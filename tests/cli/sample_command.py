@@ -5,7 +5,7 @@ from __future__ import annotations
 import argparse
 from pathlib import Path
 
-from drivers.circuit.errors import UnknownName
+from drivers.circuit.errors import NoConvergence, UnknownName
 from drivers.errors import LinkDown
 from fixture.errors import BadInput, BenchInUse, RecordsUnsafe
 from fixture.sequence.stopping import StopRequested
@@ -19,6 +19,7 @@ ERRORS: dict[str, BaseException] = {
     "unsafe": RecordsUnsafe("the disk is full"),
     "link": LinkDown("meter: gone"),
     "circuit": UnknownName("no node 'x'"),
+    "no convergence": NoConvergence("no operating point"),
     "fault": ZeroDivisionError("division by zero"),
     "ctrl-c": KeyboardInterrupt(),
     "stop": StopRequested("SIGTERM"),

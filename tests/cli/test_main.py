@@ -25,6 +25,7 @@ SAMPLE = {"sample": Command("tests.cli.sample_command", "do what the argument sa
         ("unsafe", 3, "the disk is full"),
         ("link", 3, "meter: gone"),
         ("circuit", 2, "no node 'x'"),
+        ("no convergence", 3, "no operating point"),
         ("ctrl-c", 130, "stopped"),
         ("stop", 143, "stopped"),
     ],
@@ -84,11 +85,11 @@ def test_the_help_says_what_the_commands_say_themselves() -> None:
 
 @pytest.mark.parametrize("argv", [["--help"], ["--version"], ["circuit", "--help"]])
 def test_help_and_version_come_without_the_heavy_libraries(argv: list[str]) -> None:
-    heavy = ("numpy", "scipy", "numba", "rich", "pandas", "duckdb", "pyvisa", "sounddevice")
+    heavy = {"numpy", "scipy", "numba", "rich", "pandas", "duckdb", "pyvisa", "sounddevice"}
     program = (
         "import sys; from fixture.cli.main import main; code = main(sys.argv[1:]); "
-        f"sys.exit(code or ', '.join({heavy} & sys.modules.keys()))"
-    ).replace(str(heavy), repr(set(heavy)))
+        f"sys.exit(code or sorted({heavy!r} & sys.modules.keys()) or 0)"
+    )
     done = subprocess.run(
         [sys.executable, "-c", program, *argv], cwd=HERE, capture_output=True, text=True, check=False
     )
@@ -134,3 +135,14 @@ def test_a_missing_root_folder_says_what_to_do(tmp_path: Path) -> None:
         find_root(None, {"TOELINE_ROOT": str(tmp_path / "nowhere")}, tmp_path)
     with pytest.raises(BadInput, match=r"no bench\.toml .* give --root DIR"):
         find_root(None, {}, tmp_path)
+
+
+def test_every_fault_of_a_bench_file_is_told_with_its_line(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    (tmp_path / "bench.toml").write_text('format = 1\nname = "demo"\nmains = "55 bananas"\nsuply = 1\n')
+    assert main(["--root", str(tmp_path), "test", "PT-2612-0001"]) == 2
+    shown = capsys.readouterr()
+    assert shown.out == ""
+    assert all(line.startswith(str(tmp_path)) for line in shown.err.splitlines())
+    assert "bench.toml:3: " in shown.err and "bench.toml:4: " in shown.err
