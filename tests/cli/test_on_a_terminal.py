@@ -139,9 +139,16 @@ def test_a_second_test_is_refused_while_one_holds_the_bench(start: Start) -> Non
     assert exit_code(first) == 0
 
 
-def test_a_hang_up_closes_the_run(start: Start) -> None:
+@pytest.mark.parametrize(
+    ("sent", "code", "words"),
+    [
+        (signal.SIGTERM, 143, r"stopped by the system \(SIGTERM\)"),
+        (signal.SIGHUP, 129, r"the terminal was closed \(SIGHUP\)"),
+    ],
+)
+def test_termination_closes_the_run(start: Start, sent: signal.Signals, code: int, words: str) -> None:
     child = start("test", "PT-2612-0001", "--hands", "terminal")
     child.expect("press Enter when done")
-    os.kill(child.pid, signal.SIGTERM)
-    child.expect("! STOPPED: stopped by the system")
-    assert exit_code(child) == 143
+    os.kill(child.pid, sent)
+    child.expect(f"! STOPPED: .*{words}")
+    assert exit_code(child) == code
