@@ -142,7 +142,7 @@ class GivenReadings:
 
     kind: str
     given: Sequence[Reading | Callable[[], Any]]
-    promised: Sequence[str] = ()
+    promised: Sequence[str | ReadingSpec] = ()
     title: str = "given readings"
     doc: str = ""
     options: tuple[Option, ...] = ()
@@ -150,7 +150,7 @@ class GivenReadings:
 
     def readings(self, options: Any, model_nodes: tuple[str, ...]) -> tuple[ReadingSpec, ...]:
         names = self.promised or [one.name for one in self.given if isinstance(one, Reading)]
-        return tuple(ReadingSpec(name, "V") for name in names)
+        return tuple(name if isinstance(name, ReadingSpec) else ReadingSpec(name, "V") for name in names)
 
     def run(self, step: StepSpec, model: Model, bench: Any) -> Iterator[Reading]:
         for one in self.given:
