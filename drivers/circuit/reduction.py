@@ -63,7 +63,8 @@ def reduce_network(network: Network, half_step_s: float, *, trapezoidal: bool) -
     """
     layout = network.layout
     capacitor = network.is_capacitor
-    companion = np.where(capacitor, network.reactances / half_step_s, half_step_s / network.reactances)
+    companion = network.reactances / half_step_s
+    companion[~capacitor] = half_step_s / network.reactances[~capacitor]  # an open capacitor has 0 F
     matrix = network.linear + (network.reactive * companion) @ network.reactive.T
     matrix += (network.junctions * SHIFT_SIEMENS) @ network.junctions.T
     nodes = len(layout.rows)
