@@ -17,7 +17,8 @@ from drivers.errors import LinkDown
 from drivers.roles import Operator, Prompt
 from fixture.bench.placing import Placement
 from fixture.bench.planted import plant_faults
-from fixture.cli.session import Surroundings, TestSession, TestWishes
+from fixture.cli.session import TestSession, TestWishes
+from fixture.cli.surroundings import Surroundings
 from fixture.domain.model import Model
 from fixture.domain.options import ReadingSpec
 from fixture.domain.reading import Curve, Reading
