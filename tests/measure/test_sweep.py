@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 
 import numpy as np
 import pytest
@@ -84,3 +85,35 @@ def test_a_band_beyond_the_sample_rate_is_refused() -> None:
 def test_a_sweep_without_time_is_refused() -> None:
     with pytest.raises(ValueError, match="too short"):
         plan_sweep(20.0, 16e3, RATE_HZ, 0.1)
+
+
+def _through(wave: np.ndarray, response_at: Callable[[np.ndarray], np.ndarray]) -> np.ndarray:
+    size = 1 << (2 * wave.size).bit_length()
+    hz = np.fft.rfftfreq(size, 1 / RATE_HZ)
+    return np.fft.irfft(np.fft.rfft(wave, size) * response_at(hz), size)[: wave.size]
+
+
+def _high_pass(order: int) -> Callable[[np.ndarray], np.ndarray]:
+    return lambda hz: 40.0 * (1j * hz / 20.0 / (1 + 1j * hz / 20.0)) ** order / (1 + 1j * hz / 7e3)
+
+
+def _resonance(hz_peak: float, q: float) -> Callable[[np.ndarray], np.ndarray]:
+    return lambda hz: 40.0 / (1 - (hz / hz_peak) ** 2 + 1j * hz / hz_peak / q)
+
+
+@pytest.mark.parametrize("duration_s", [2.0, 4.0])
+@pytest.mark.parametrize(
+    "response_at",
+    [_high_pass(1), _high_pass(3), _resonance(3e3, 5.0), _resonance(1e3, 2.0), _resonance(100.0, 10.0)],
+    ids=["one corner", "three corners", "q of 5", "q of 2", "q of 10"],
+)
+def test_the_stated_uncertainty_covers_what_the_method_does_to_a_bent_curve(
+    duration_s: float, response_at: Callable[[np.ndarray], np.ndarray]
+) -> None:
+    """Closed forms of filters without any noise: what is wrong is the method's own, and within its U."""
+    sweep = plan_sweep(20.0, 16e3, RATE_HZ, duration_s)
+    wave = make_sweep(sweep, 1e-4, RATE_HZ)
+    hz = log_grid_hz(20.0, 16e3)
+    response = measure_response(sweep, wave, _through(wave, response_at), RATE_HZ, hz, 997.0)
+    true_db = 20 * np.log10(np.abs(response_at(hz)) / np.abs(response_at(np.array([997.0]))))
+    assert np.all(np.abs(response.db - true_db) <= 2.0 * response.u_db)
