@@ -110,10 +110,10 @@ def model() -> Model:
 def run_step(model: Model) -> Callable[..., list[Any]]:
     """Run a step kind on a bench with its declared defaults, but for the options given."""
 
-    def run(bench: FakeBench, kind_name: str, **given: Any) -> list[Any]:
+    def run(bench: FakeBench, kind_name: str, *, limits: Any = None, **given: Any) -> list[Any]:
         kind = get_kind(kind_name)
         options = {option.name: option.default for option in kind.options} | given
-        step = StepSpec("step", kind_name, kind.options_type(**options), {"fuzz": 1.0})
+        step = StepSpec("step", kind_name, kind.options_type(**options), {"fuzz": 1.0}, limits or {})
         return list(kind.run(step, model, bench))  # type: ignore[arg-type]
 
     return run

@@ -9,6 +9,7 @@ import pytest
 
 from drivers.errors import AudioNoSignal
 from fixture.bench.facade import FixtureState
+from fixture.domain.limits import Limits
 
 CUBIC = 2e6  # at 0.1 mV peak: 1.5 % more fundamental, third harmonic 0.5 %
 AT_ONE_TENTH_MILLIVOLT = 1.0 + 0.75 * CUBIC * 1e-4**2
@@ -86,3 +87,21 @@ def test_controls_are_set_before_the_fixture_and_the_pad_is_as_asked(run_step, m
 def test_trouble_of_the_bench_is_no_reading(run_step, make_bench) -> None:
     with pytest.raises(AudioNoSignal):
         run_step(make_bench(failure=AudioNoSignal("audio: nothing arrives")), "gain")
+
+
+@pytest.mark.parametrize(("low_db", "has_value"), [(20.0, False), (60.0, True), (None, True)])
+def test_noise_above_the_low_limit_hides_a_dead_unit_and_never_passes_it(
+    run_step, make_bench, low_db: float | None, has_value: bool
+) -> None:
+    # 0.1 V of noise: nothing below about 35 dB can be seen at 0.1 mV; white noise of rms s over n frames is
+    # s sqrt(2 / n) in each quadrature of a bin, and the bound is at least three of that.
+    dead = make_bench(transfer=lambda hz: 0.0 * hz, noise_volts=0.1)
+    (reading,) = run_step(dead, "gain", limits={"gain": Limits(low_db, None, "dB")})
+    bound_db = 20 * math.log10(3 * 0.1 * math.sqrt(2 / 48000) / 1e-4)
+    assert bound_db > 20.0
+    if has_value:
+        assert 20.0 < reading.value < 60.0 and "no signal" in reading.note
+    else:
+        assert (
+            reading.value is None and "too high to hold that against the limit of 20.0 dB" in reading.why_not
+        )
