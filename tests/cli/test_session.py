@@ -362,3 +362,11 @@ def test_a_view_that_breaks_is_said_and_stops_no_test(counter: Counter) -> None:
     assert counter.session().test_one("PT-2612-0001") == 0
     assert len(counter.journal.closed) == 1
     assert "recorded: PASS" in counter.err.getvalue()
+
+
+def test_outputs_that_could_not_be_seen_off_are_no_success(counter: Counter) -> None:
+    bench = counter.bench
+    bench.on = {"power_on": lambda: setattr(bench, "safe_problems", ("SUPPLY MAY BE ON",))}
+    assert counter.session().test_one("PT-2612-0001") == 3
+    assert "! SUPPLY MAY BE ON" in counter.out.getvalue()
+    assert "PASS" in counter.out.getvalue()
