@@ -188,7 +188,7 @@ def curve(*points: tuple[float, float]) -> Reading:
 
 
 def test_a_curve_is_as_good_as_its_worst_point() -> None:
-    judged = judge_reading("Response", curve((100, 0), (316.2277660168379, -2.5), (1000, 0)), MASK, 1.0)
+    judged = judge_reading("Response", curve((100, 0), (316.2277660168379, -2.5), (1e4, 0)), MASK, 1.0)
     assert judged.verdict is Verdict.FAIL
     assert judged.distance == pytest.approx(-0.5)  # the bound half way over log f is -2 dB
     assert judged.reading.value == judged.distance and judged.reading.unit == "dB"
@@ -201,7 +201,7 @@ def test_points_outside_the_first_and_last_row_are_not_judged() -> None:
 
 
 def test_where_a_bound_is_left_out_only_the_other_one_counts() -> None:
-    assert judge_reading("R", curve((3000, -30)), MASK, 1.0).verdict is Verdict.PASS
+    assert judge_reading("R", curve((100, 0), (3000, -30), (1e4, 0)), MASK, 1.0).verdict is Verdict.PASS
     assert judge_reading("R", curve((3000, 2)), MASK, 1.0).verdict is Verdict.FAIL
 
 
@@ -209,6 +209,32 @@ def test_a_curve_off_the_mask_altogether_is_not_measured() -> None:
     judged = judge_reading("Response", curve((20, 0), (50, 0)), MASK, 1.0)
     assert judged.verdict is Verdict.NOT_MEASURED
     assert judged.said == "response not measured: no point of the curve lies within the mask"
+
+
+@pytest.mark.parametrize(
+    ("points", "said"),
+    [
+        (((100, 0), (5000, 0)), "the mask wants 5 kHz to 10 kHz too, where there is no curve"),
+        (((200, 0), (10000, 0)), "the mask wants 100 Hz to 200 Hz too, where there is no curve"),
+    ],
+)
+def test_a_good_curve_that_does_not_reach_all_of_its_mask_is_not_measured(points, said: str) -> None:
+    judged = judge_reading("Response", curve(*points), MASK, 1.0)
+    assert judged.verdict is Verdict.NOT_MEASURED and judged.reading.value is None
+    assert judged.said == f"response not measured: {said}"
+
+
+def test_a_bad_curve_fails_even_where_it_does_not_reach_all_of_its_mask() -> None:
+    assert judge_reading("Response", curve((100, 0), (500, -5)), MASK, 1.0).verdict is Verdict.FAIL
+
+
+def test_a_curve_may_end_one_step_of_its_grid_before_the_mask() -> None:
+    assert judge_reading("R", curve((105, 0), (9500, 0)), MASK, 1.0).verdict is Verdict.PASS
+
+
+def test_rows_without_any_bound_ask_for_no_curve() -> None:
+    mask = Mask(((20.0, None, None), (100.0, -1.0, 1.0), (1000.0, -1.0, 1.0), (20e3, None, None)))
+    assert judge_reading("R", curve((100, 0), (1000, 0)), mask, 1.0).verdict is Verdict.PASS
 
 
 def test_a_point_without_a_figure_is_not_measured() -> None:
@@ -222,6 +248,9 @@ def test_a_mask_without_a_curve_is_not_measured() -> None:
 
 def test_a_mask_can_be_guarded() -> None:
     guarded = Mask(MASK.points, "guarded")
-    assert judge_reading("R", curve((1000, 0.7)), guarded, 1.0).verdict is Verdict.PASS
-    assert judge_reading("R", curve((1000, 0.9)), guarded, 1.0).verdict is Verdict.CONDITIONAL
+    assert judge_reading("R", curve((100, 0), (1000, 0.7), (1e4, 0)), guarded, 1.0).verdict is Verdict.PASS
+    assert (
+        judge_reading("R", curve((100, 0), (1000, 0.9), (1e4, 0)), guarded, 1.0).verdict
+        is Verdict.CONDITIONAL
+    )
     assert judge_reading("R", curve((1000, 1.1)), guarded, 1.0).verdict is Verdict.FAIL
