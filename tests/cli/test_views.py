@@ -43,7 +43,7 @@ HEADER = RunHeader(
     started_monotonic_s=100.0,
     ambient_celsius=23.0,
     software="toeline test",
-    planted=("open Cin",),
+    planted=("open C1",),
 )
 MASK = Mask(((20.0, -3.0, None), (20000.0, -6.0, 1.0)))
 
@@ -119,7 +119,7 @@ def text(request: pytest.FixtureRequest, monkeypatch: pytest.MonkeyPatch) -> str
     [
         "PT-2612-0001  Peat, limits revision 3 (predicted)",
         "SIMULATED BENCH",
-        "planted in this unit: open Cin",
+        "planted in this unit: open C1",
         "Bias",
         "> Fuzz fully right.",
         "! bench: Bias: the meter does not answer",

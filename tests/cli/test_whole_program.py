@@ -82,24 +82,24 @@ def test_a_good_unit_passes_and_the_json_has_all_that_was_promised(toeline: Toel
 def test_a_planted_fault_fails_in_words_stays_with_the_serial_and_is_mended(
     toeline: Toeline, root: Path
 ) -> None:
-    failed = toeline("test", "PT-2612-0002", "--plant", "open Cin")
+    failed = toeline("test", "PT-2612-0002", "--plant", "open C1")
     assert failed.code == 1
-    assert "planted in this unit: open Cin" in failed.out
+    assert "planted in this unit: open C1" in failed.out
     assert "x FAIL: " in failed.out
     assert re.search(r"^  x .*gain .*allowed", failed.out, re.MULTILINE)
     assert "toeline trace PT-2612-0002" in failed.out
-    assert toeline("test", "PT-2612-0002", "--json").json["planted"] == ["open Cin"]
+    assert toeline("test", "PT-2612-0002", "--json").json["planted"] == ["open C1"]
     assert toeline("test", "PT-2612-0001", "--json").json["planted"] == []
     mended = toeline("test", "PT-2612-0002", "--mend", "--json")
     assert (mended.code, mended.json["verdict"], mended.json["planted"]) == (0, "PASS", [])
     runs = toeline("trace", "PT-2612-0002", "--json").json["runs"]
     assert [one["verdict"] for one in runs] == ["FAIL", "FAIL", "PASS"]
-    assert runs[0]["planted"] == ["open Cin"]
+    assert runs[0]["planted"] == ["open C1"]
     assert runs[0]["failed"]
 
 
 def test_a_shorted_supply_is_the_units_fault_and_ends_the_test(toeline: Toeline) -> None:
-    done = toeline("test", "PT-2612-0003", "--plant", "short Cres", "--json")
+    done = toeline("test", "PT-2612-0003", "--plant", "short C4", "--json")
     assert done.code == 1
     run = done.json
     assert run["verdict"] == "FAIL"
@@ -110,7 +110,7 @@ def test_a_shorted_supply_is_the_units_fault_and_ends_the_test(toeline: Toeline)
 
 @pytest.mark.parametrize(
     ("words", "said"),
-    [("opn Cin", "not a fault"), ("open R99", "no part 'R99'"), ("short Cinn", "nearest: Cin")],
+    [("opn C1", "not a fault"), ("open R99", "no part 'R99'"), ("short C11", "nearest: C1")],
 )
 def test_words_that_are_no_fault_are_not_kept(toeline: Toeline, root: Path, words: str, said: str) -> None:
     done = toeline("test", "PT-2612-0001", "--plant", words)
@@ -127,7 +127,7 @@ def test_words_that_are_no_fault_are_not_kept(toeline: Toeline, root: Path, word
         (("XX-1", "--model", "peat"), "PT-2612-0001"),
         (("PT-2612-0001", "--procedure", "lin"), "did you mean line"),
         (("",), "is not a serial"),
-        (("--plant", "open Cin"), "go with a serial"),
+        (("--plant", "open C1"), "go with a serial"),
     ],
 )
 def test_what_cannot_be_tested_is_one_line_and_leaves_no_record(
@@ -189,7 +189,7 @@ def test_a_fault_of_the_models_netlist_is_told_with_its_line(
 ) -> None:
     path = root / "limits" / "peat" / "circuit.cir"
     lines = path.read_text(encoding="utf-8").splitlines()
-    where = next(n for n, text in enumerate(lines) if text.startswith("Rc1"))
+    where = next(n for n, text in enumerate(lines) if text.startswith("R2"))
     path.write_text("\n".join([*lines[:where], card, *lines[where:]]) + "\n", encoding="utf-8")
     done = toeline("test", "PT-2612-0001")
     assert (done.code, done.out) == (2, "")

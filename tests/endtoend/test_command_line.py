@@ -77,7 +77,7 @@ def test_a_good_unit_passes_and_every_reading_is_on_record(bench_root: Path) -> 
 
 
 def test_a_planted_fault_fails_stays_with_the_serial_and_goes_when_mended(bench_root: Path) -> None:
-    failed = toeline("test", "PT-2612-0002", "--plant", "open Cbyp", root=bench_root)
+    failed = toeline("test", "PT-2612-0002", "--plant", "open C2", root=bench_root)
     assert failed.returncode == 1
     assert "FAIL" in failed.stdout and "too low" in failed.stdout
     again = toeline("test", "pt-2612-0002 ", "--json", root=bench_root)
