@@ -77,10 +77,10 @@ def test_a_clipped_take_gives_no_value(run_step, make_bench) -> None:
 
 def test_controls_are_set_before_the_fixture_and_the_pad_is_as_asked(run_step, make_bench) -> None:
     bench = make_bench()
-    run_step(bench, "gain", pad="coarse", load="10k")
+    run_step(bench, "gain", pad="coarse", load="10k", source="coil")
     assert bench.calls == [
         ("controls", {"fuzz": 1.0}),
-        ("state", FixtureState(pad="coarse", source="line", load="10k", engaged=True)),
+        ("state", FixtureState(pad="coarse", source="coil", load="10k", engaged=True)),
     ]
 
 
