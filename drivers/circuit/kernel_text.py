@@ -107,14 +107,14 @@ def rescue(acc, feedback, parameters, held, before, shift, per_second, found, am
 RESCUE = """if not converged:
     for r in range(PORTS):
         before[r] = state[states + r]
-        held[r] = state[states + 2 * PORTS + r]
+        held[r] = state[states + PORTS + r]
     if not rescue(acc, feedback, parameters, held, before, shift, per_second, found, amps, charges):
         return n"""
 
 BY_ARRAYS = """for r in range(PORTS):
     before[r] = state[states + r]
-    held[r] = state[states + 2 * PORTS + r]
-    found[r] = 2.0 * before[r] - state[states + PORTS + r]
+    held[r] = state[states + PORTS + r]
+    found[r] = 3.0 * (before[r] - state[states + 2 * PORTS + r]) + state[states + 3 * PORTS + r]
 evaluate(before, parameters, held, shift, per_second, amps, unused, charges, critical)
 for r in range(PORTS):
     found[r] = min(found[r], critical[r])
@@ -124,9 +124,10 @@ if not newton(25, acc, feedback, parameters, held, shift, per_second, found, amp
 for j in range(PORTS):
     for r in range(rows):
         acc[r] += feedback[j, r] * amps[j]
-    state[states + PORTS + j] = before[j]
+    state[states + 3 * PORTS + j] = state[states + 2 * PORTS + j]
+    state[states + 2 * PORTS + j] = before[j]
     state[states + j] = found[j]
-    state[states + 2 * PORTS + j] = (1.0 + remember) * charges[j] - remember * held[j]"""
+    state[states + PORTS + j] = (1.0 + remember) * charges[j] - remember * held[j]"""
 
 ADVANCE = '''@njit(
     f"int64(int64, {_MATRIX}, {_MATRIX}, {_MATRIX}, {_VECTOR}, {_VECTOR}, {_MATRIX}, "
@@ -199,12 +200,14 @@ def settle(
     Returns the steps done and why it came back: 0 all done, 1 the steps may be longer, -1 they must be shorter.
     """
     read = outputs.shape[1]
-    whole = np.empty_like(state)
-    half = np.empty_like(state)
-    whole_out = np.empty_like(outputs)
+    size = state.size
+    whole = np.empty(size)
+    half = np.empty(size)
+    whole_out = np.empty((1, read))
     for n in range(count):
-        whole[:] = state
-        half[:] = state
+        for s in range(size):
+            whole[s] = state[s]
+            half[s] = state[s]
         ok = advance(
             1, inputs, whole_table, whole_feedback, parameters, whole, whole_out, per_second, 0.0, shift, states
         )
@@ -225,10 +228,10 @@ def settle(
                 error = gap
         if not error <= 1.0:
             return n, -1
-        for s in range(states + 3 * PORTS):
+        for s in range(size):
             state[s] = 2.0 * half[s] - whole[s]
-        for s in range(PORTS):
-            state[states + PORTS + s] = half[states + PORTS + s]
+        for s in range(states + 2 * PORTS, size):
+            state[s] = half[s]
         for r in range(read):
             outputs[0, r] = 2.0 * outputs[0, r] - whole_out[0, r]
         if error < 0.1:

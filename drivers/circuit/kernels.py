@@ -54,7 +54,7 @@ class Kernel:
     advance : callable
         ``advance(count, inputs, table, feedback, parameters, state, outputs, per_second, remember, shift,
         states)``: up to `count` steps; returns how many converged. `state` is flat: reactive states, port voltages,
-        port voltages one step before, port charges; it is changed in place.
+        port charges, port voltages one and two steps before; it is changed in place.
     settle : callable
         Pairs of backward Euler steps, whole and halved, extrapolated: see `kernel_source`.
     """
@@ -84,7 +84,7 @@ def load_kernel(key: KernelKey) -> Kernel:
     """Return a kernel, from the cache where possible; the first time on a machine it takes some seconds."""
     source = kernel_source(key.bjts, key.diodes, key.charged)
     stem = f"kernel_{key.bjts}q_{key.diodes}d{'_charged' if key.charged else ''}"
-    module = _load(stem, source, seconds=round(3.0 + 0.9 * key.ports * (2 if key.charged else 1)))
+    module = _load(stem, source, seconds=round(2.0 + 0.5 * key.ports * (2 if key.charged else 1)))
     return Kernel(advance=module.advance, settle=module.settle)
 
 

@@ -44,7 +44,7 @@ _SHORTEST_STEP_S = 1e-6  # what moves faster has moved: shorter steps are for co
 
 @dataclass(frozen=True, eq=False)
 class State:
-    """What a circuit holds: capacitor volts and inductor amps, port volts now and one step before."""
+    """What a circuit holds: capacitor volts and inductor amps, port volts now and (for the next guess) before."""
 
     reactive: FloatArray
     port_volts: FloatArray
@@ -99,7 +99,7 @@ class Simulator:
             ]
         )
         self._state_tolerances = np.where(network.is_capacitor, _STATE_TOLERANCE_VOLTS, _STATE_TOLERANCE_AMPS)
-        self._flat = np.zeros(network.is_capacitor.size + 3 * self._layout.ports)
+        self._flat = np.zeros(network.is_capacitor.size + 4 * self._layout.ports)
         self._run_step: Reduced | None = None
         self._flat_before = self._flat
         self._settling_step_s = 0.0
@@ -115,7 +115,7 @@ class Simulator:
     def start_discharged(self) -> None:
         """Begin with every capacitor, inductor and junction at zero."""
         ports = np.zeros(self._layout.ports)
-        self.restore(State(np.zeros(self._values.network.is_capacitor.size), ports, ports))
+        self.restore(State(np.zeros(self._values.network.is_capacitor.size), ports, np.tile(ports, 2)))
 
     def start_at_operating_point(self) -> None:
         """Begin settled, all sources at their DC values.
@@ -131,7 +131,7 @@ class Simulator:
         held = {**point.capacitor_volts, **point.inductor_amps}
         layout = self._layout
         ports = np.array([v for name in (*layout.bjts, *layout.diodes) for v in point.port_volts[name]])
-        self.restore(State(np.array([held[name] for name in layout.reactive]), ports, ports))
+        self.restore(State(np.array([held[name] for name in layout.reactive]), ports, np.tile(ports, 2)))
 
     def state(self) -> State:
         """Return what the circuit holds now."""
@@ -140,7 +140,7 @@ class Simulator:
         return State(
             self._flat[:states].copy(),
             self._flat[states : states + ports].copy(),
-            self._flat[states + ports : states + 2 * ports].copy(),
+            self._flat[states + 2 * ports :].copy(),
         )
 
     def restore(self, state: State) -> None:
@@ -151,8 +151,8 @@ class Simulator:
             [
                 state.reactive,
                 state.port_volts,
-                state.port_volts_before,
                 np.zeros(self._layout.ports),
+                state.port_volts_before,
             ]
         )
         self._charge_junctions()
@@ -203,7 +203,7 @@ class Simulator:
         if self._values.network.charged:
             states, ports = self._sizes()
             volts = self._flat[states : states + ports]
-            self._flat[states + 2 * ports :] = junction_charges(self._values.network, volts)
+            self._flat[states + ports : states + 2 * ports] = junction_charges(self._values.network, volts)
 
     def _sizes(self) -> tuple[int, int]:
         return self._values.network.is_capacitor.size, self._layout.ports
@@ -423,7 +423,7 @@ class Simulator:
         states, ports = self._sizes()
         physical = self._flat.copy()
         physical[:states] = 0.5 * (self._flat[:states] + self._flat_before[:states])
-        held = slice(states + 2 * ports, None)
+        held = slice(states + ports, states + 2 * ports)
         physical[held] = 0.5 * (self._flat[held] + self._flat_before[held])
         self._flat = physical
 
