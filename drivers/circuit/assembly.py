@@ -349,7 +349,7 @@ def device_parameters(devices: Iterable[Bjt | Diode]) -> FloatArray:
     for device in devices:
         if isinstance(device, Bjt):
             values = bjt_values(device.law)
-            is_amps, nf_vt, nr_vt = values[0], values[3], values[4]
+            is_amps, nf_vt, nr_vt = values[:3]
             flat += [critical_volts(is_amps, nf_vt), critical_volts(is_amps, nr_vt)]
             flat += [*values, *bjt_charge_values(device.law)]
         else:

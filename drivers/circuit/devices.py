@@ -28,9 +28,10 @@ _LARGEST_EXPONENT = 80.0  # e^80 amps per amp is past every real bias; beyond it
 def junction_current(volts: float, is_amps: float, nvt_volts: float) -> tuple[float, float]:
     """Return current and conductance of an ideal junction, (amps, siemens)."""
     if volts < -3.0 * nvt_volts:
-        tail = 3.0 * nvt_volts / (volts * _E)
+        per_volt = 1.0 / volts
+        tail = 3.0 / _E * nvt_volts * per_volt
         tail = tail * tail * tail
-        return -is_amps * (1.0 + tail), is_amps * 3.0 * tail / volts
+        return -is_amps * (1.0 + tail), is_amps * 3.0 * tail * per_volt
     x = volts / nvt_volts
     if x > _LARGEST_EXPONENT:
         top = math.exp(_LARGEST_EXPONENT)
@@ -105,28 +106,18 @@ def base_charge(
     return qb, by_vbe, by_vbc
 
 
-def bjt_currents(
+def transport(
     vbe: float,
     vbc: float,
     is_amps: float,
-    bf: float,
-    br: float,
     nf_vt: float,
     nr_vt: float,
     inverse_vaf: float,
     inverse_var: float,
     inverse_ikf: float,
     inverse_ikr: float,
-    ise_amps: float,
-    ne_vt: float,
-    isc_amps: float,
-    nc_vt: float,
-) -> tuple[float, float, float, float, float, float]:
-    """Return (ic, ib, dic/dvbe, dic/dvbc, dib/dvbe, dib/dvbc) of a Gummel-Poon transistor.
-
-    Currents flow into collector and base and hang on the two port voltages alone. The parameters after `vbc`
-    come in the order of `bjt_values`.
-    """
+) -> tuple[float, float, float, float, float, float, float]:
+    """Return what currents and charges share, (If, dIf/dvbe, Ir, dIr/dvbc, qb, dqb/dvbe, dqb/dvbc)."""
     forward, g_forward = junction_current(vbe, is_amps, nf_vt)
     reverse, g_reverse = junction_current(vbc, is_amps, nr_vt)
     qb, qb_by_vbe, qb_by_vbc = base_charge(
@@ -141,6 +132,27 @@ def bjt_currents(
         inverse_ikf,
         inverse_ikr,
     )
+    return forward, g_forward, reverse, g_reverse, qb, qb_by_vbe, qb_by_vbc
+
+
+def terminal_currents(
+    vbe: float,
+    vbc: float,
+    forward: float,
+    g_forward: float,
+    reverse: float,
+    g_reverse: float,
+    qb: float,
+    qb_by_vbe: float,
+    qb_by_vbc: float,
+    bf: float,
+    br: float,
+    ise_amps: float,
+    ne_vt: float,
+    isc_amps: float,
+    nc_vt: float,
+) -> tuple[float, float, float, float, float, float]:
+    """Return (ic, ib, dic/dvbe, dic/dvbc, dib/dvbe, dib/dvbc) from what `transport` found."""
     leak_e = 0.0
     g_leak_e = 0.0
     if ise_amps != 0.0:
@@ -149,17 +161,73 @@ def bjt_currents(
     g_leak_c = 0.0
     if isc_amps != 0.0:
         leak_c, g_leak_c = junction_current(vbc, isc_amps, nc_vt)
-    transport = (forward - reverse) / qb
+    per_qb = 1.0 / qb
+    across = (forward - reverse) * per_qb
     into_base_c = reverse / br + leak_c
     g_base_c = g_reverse / br + g_leak_c
     return (
-        transport - into_base_c,
+        across - into_base_c,
         forward / bf + leak_e + into_base_c,
-        (g_forward - transport * qb_by_vbe) / qb,
-        (-g_reverse - transport * qb_by_vbc) / qb - g_base_c,
+        (g_forward - across * qb_by_vbe) * per_qb,
+        (-g_reverse - across * qb_by_vbc) * per_qb - g_base_c,
         g_forward / bf + g_leak_e,
         g_base_c,
     )
+
+
+def diffusion_charges(
+    vbe: float,
+    forward: float,
+    g_forward: float,
+    reverse: float,
+    g_reverse: float,
+    qb: float,
+    qb_by_vbe: float,
+    qb_by_vbc: float,
+    tf_s: float,
+    tr_s: float,
+) -> tuple[float, float, float, float, float]:
+    """Return (qbe, qbc, dqbe/dvbe, dqbe/dvbc, dqbc/dvbc) of the charge in transit, from what `transport` found.
+
+    The forward charge is TF If / qb while the junction is forward biased, so qbe depends a little on vbc.
+    """
+    if vbe <= 0.0:
+        return tf_s * forward, tr_s * reverse, tf_s * g_forward, 0.0, tr_s * g_reverse
+    per_qb = 1.0 / qb
+    carried = forward * per_qb
+    return (
+        tf_s * carried,
+        tr_s * reverse,
+        tf_s * (g_forward - carried * qb_by_vbe) * per_qb,
+        -tf_s * carried * qb_by_vbc * per_qb,
+        tr_s * g_reverse,
+    )
+
+
+def bjt_currents(
+    vbe: float,
+    vbc: float,
+    is_amps: float,
+    nf_vt: float,
+    nr_vt: float,
+    inverse_vaf: float,
+    inverse_var: float,
+    inverse_ikf: float,
+    inverse_ikr: float,
+    bf: float,
+    br: float,
+    ise_amps: float,
+    ne_vt: float,
+    isc_amps: float,
+    nc_vt: float,
+) -> tuple[float, float, float, float, float, float]:
+    """Return (ic, ib, dic/dvbe, dic/dvbc, dib/dvbe, dib/dvbc) of a Gummel-Poon transistor.
+
+    Currents flow into collector and base and hang on the two port voltages alone. The parameters after `vbc`
+    come in the order of `bjt_values`.
+    """
+    shared = transport(vbe, vbc, is_amps, nf_vt, nr_vt, inverse_vaf, inverse_var, inverse_ikf, inverse_ikr)
+    return terminal_currents(vbe, vbc, *shared, bf, br, ise_amps, ne_vt, isc_amps, nc_vt)
 
 
 def bjt_charges(
@@ -182,38 +250,15 @@ def bjt_charges(
     tf_s: float,
     tr_s: float,
 ) -> tuple[float, float, float, float, float]:
-    """Return (qbe, qbc, dqbe/dvbe, dqbe/dvbc, dqbc/dvbc) in coulombs and farads.
+    """Return (qbe, qbc, dqbe/dvbe, dqbe/dvbc, dqbc/dvbc) in coulombs and farads, depletion and diffusion.
 
-    The forward diffusion charge is TF If / qb while the junction is forward biased, so qbe depends a little
-    on vbc. The parameters after `vbc` come in the order of `bjt_charge_values`.
+    The parameters after `vbc` come in the order of `bjt_charge_values`.
     """
-    qbe, cbe = depletion_charge(vbe, cje_farads, vje_volts, mje, fc)
-    qbc, cbc = depletion_charge(vbc, cjc_farads, vjc_volts, mjc, fc)
-    cross = 0.0
-    if tf_s != 0.0 or tr_s != 0.0:
-        forward, g_forward = junction_current(vbe, is_amps, nf_vt)
-        reverse, g_reverse = junction_current(vbc, is_amps, nr_vt)
-        qbc += tr_s * reverse
-        cbc += tr_s * g_reverse
-        if vbe > 0.0:
-            qb, qb_by_vbe, qb_by_vbc = base_charge(
-                vbe,
-                vbc,
-                forward,
-                g_forward,
-                reverse,
-                g_reverse,
-                inverse_vaf,
-                inverse_var,
-                inverse_ikf,
-                inverse_ikr,
-            )
-            forward /= qb
-            g_forward = (g_forward - forward * qb_by_vbe) / qb
-            cross = -tf_s * forward * qb_by_vbc / qb
-        qbe += tf_s * forward
-        cbe += tf_s * g_forward
-    return qbe, qbc, cbe, cross, cbc
+    depleted_be, c_be = depletion_charge(vbe, cje_farads, vje_volts, mje, fc)
+    depleted_bc, c_bc = depletion_charge(vbc, cjc_farads, vjc_volts, mjc, fc)
+    shared = transport(vbe, vbc, is_amps, nf_vt, nr_vt, inverse_vaf, inverse_var, inverse_ikf, inverse_ikr)
+    qbe, qbc, cbe, cross, cbc = diffusion_charges(vbe, *shared, tf_s, tr_s)
+    return depleted_be + qbe, depleted_bc + qbc, c_be + cbe, cross, c_bc + cbc
 
 
 def diode_values(law: DiodeLaw) -> tuple[float, float]:
@@ -239,15 +284,9 @@ def bjt_values(law: BjtLaw) -> tuple[float, ...]:
     """Return the 13 parameters of `bjt_currents` in its order."""
     vt = law.vt_volts
     return (
-        law.is_amps,
+        *_transport_values(law),
         law.bf,
         law.br,
-        law.nf * vt,
-        law.nr * vt,
-        1.0 / law.vaf_volts,
-        1.0 / law.var_volts,
-        1.0 / law.ikf_amps,
-        1.0 / law.ikr_amps,
         law.ise_amps,
         law.ne * vt,
         law.isc_amps,
@@ -257,15 +296,8 @@ def bjt_values(law: BjtLaw) -> tuple[float, ...]:
 
 def bjt_charge_values(law: BjtLaw) -> tuple[float, ...]:
     """Return the 16 parameters of `bjt_charges` in its order."""
-    vt = law.vt_volts
     return (
-        law.is_amps,
-        law.nf * vt,
-        law.nr * vt,
-        1.0 / law.vaf_volts,
-        1.0 / law.var_volts,
-        1.0 / law.ikf_amps,
-        1.0 / law.ikr_amps,
+        *_transport_values(law),
         law.be.cj_farads,
         law.be.vj_volts,
         law.be.m,
@@ -275,4 +307,16 @@ def bjt_charge_values(law: BjtLaw) -> tuple[float, ...]:
         law.be.fc,
         law.be.tt_s,
         law.bc.tt_s,
+    )
+
+
+def _transport_values(law: BjtLaw) -> tuple[float, ...]:
+    return (
+        law.is_amps,
+        law.nf * law.vt_volts,
+        law.nr * law.vt_volts,
+        1.0 / law.vaf_volts,
+        1.0 / law.var_volts,
+        1.0 / law.ikf_amps,
+        1.0 / law.ikr_amps,
     )

@@ -15,24 +15,26 @@ from drivers.circuit.assembly import BJT_PARAMETERS, DIODE_PARAMETERS
 from drivers.circuit.kernel_text import ADVANCE, ARRAY_NEWTON, BY_ARRAYS, HEAD, RESCUE, SETTLE
 
 _MOST_UNROLLED_PORTS = 12
-_BJT_LAW_ARGUMENTS = 13
-_NEAR_VOLTS = 3e-4
-"""Within this distance a diffusion charge is taken along its tangent. At a transit time of 60 ns and 192 kHz the rest
-is worth 40 nV of junction voltage, -116 dB of VT."""
-_NEAR_DEPLETION_VOLTS = 3e-3
-"""The same for depletion charges, whose curve bends over tenths of a volt and which cost two logarithms."""
+_TRANSPORT_ARGUMENTS = 7
+_TERMINAL_ARGUMENTS = 6
+_NEAR_VOLTS = 3e-3
+_NEAR_RATIO = 0.01
+"""Within this distance, and in reverse this share of the voltage more, a depletion charge is taken along its tangent:
+the curve costs two logarithms and bends over tenths of a volt."""
 _REVERSE_VOLTS = -0.2
 _BEND_VOLTS = 4e-3
-_TOLERANCE_VOLTS = 1e-5
+_TOLERANCE_VOLTS = 1.5e-5
+"""The last step goes along the tangent: what it leaves out is (15 uV / VT)^2 / 2 of a current, -135 dB."""
 _TOLERANCE_REVERSE_RATIO = 0.01
 """In reverse a step counts for this much: what is left of the curve bends a thousand times less."""
+_SHARED = "forward, g_forward, reverse, g_reverse, qb, qb_by_vbe, qb_by_vbc"
 _LAWS = (
     "junction_current",
     "depletion_charge",
-    "diode_charge",
     "base_charge",
-    "bjt_currents",
-    "bjt_charges",
+    "transport",
+    "terminal_currents",
+    "diffusion_charges",
 )
 
 
@@ -42,7 +44,12 @@ def kernel_source(bjts: int, diodes: int, charged: bool) -> str:
     parts = [HEAD, _device_laws(), _evaluate(bjts, diodes, charged), ARRAY_NEWTON]
     solve = _unrolled(bjts, diodes, charged) if ports <= _MOST_UNROLLED_PORTS else BY_ARRAYS
     advance = ADVANCE.replace("JUNCTIONS\n", _indented(solve, 8) + "\n" if ports else "")
-    opening = _no_charges_yet(bjts, diodes) if charged else []
+    opening: list[str] = []
+    if ports <= _MOST_UNROLLED_PORTS:
+        every = range(ports)
+        opening = _constants(bjts, diodes) + (_no_charges_yet(bjts, diodes) if charged else [])
+        opening += [f"k{r}_{c} = feedback[{c}, {r}]" for r in every for c in every]
+        opening += [f"vc{j} = {text}" for j, text in enumerate(_critical(bjts, diodes))]
     advance = advance.replace("OPENING\n", "".join(_indented(line, 4) + "\n" for line in opening))
     parts += [advance, SETTLE]
     return "\n\n".join(parts).replace("PORTS", str(ports)) + "\n"
@@ -58,7 +65,7 @@ def _device_laws() -> str:
             node.returns = None
             for argument in node.args.args:
                 argument.annotation = None
-            kept.append(f"@njit(**_OPTIONS)\n{ast.unparse(node)}")
+            kept.append(f"@njit(forceinline=True, **_OPTIONS)\n{ast.unparse(node)}")
     return "\n\n".join(kept)
 
 
@@ -67,7 +74,12 @@ def _indented(text: str, spaces: int) -> str:
 
 
 def _arguments(first: int, count: int) -> str:
-    return ", ".join(f"parameters[{first + i}]" for i in range(count))
+    return ", ".join(f"c{first + i}" for i in range(count))
+
+
+def _constants(bjts: int, diodes: int) -> list[str]:
+    """Lines that fetch all parameters of the devices."""
+    return [f"c{at} = parameters[{at}]" for at in range(BJT_PARAMETERS * bjts + DIODE_PARAMETERS * diodes)]
 
 
 def _bases(bjts: int, diodes: int) -> tuple[list[int], list[int]]:
@@ -85,9 +97,12 @@ def _law_lines(bjts: int, diodes: int, charged: bool) -> tuple[list[str], dict[t
     bjt_bases, diode_bases = _bases(bjts, diodes)
     for number, base in enumerate(bjt_bases):
         j, k = 2 * number, 2 * number + 1
-        law = _arguments(base + 2, _BJT_LAW_ARGUMENTS)
+        at = base + 2
+        charge_at = at + 2 * _TRANSPORT_ARGUMENTS + _TERMINAL_ARGUMENTS
         lines += [
-            f"ic, ib, c_be, c_bc, b_be, b_bc = bjt_currents(w{j}, w{k}, {law})",
+            f"{_SHARED} = transport(w{j}, w{k}, {_arguments(at, _TRANSPORT_ARGUMENTS)})",
+            f"ic, ib, c_be, c_bc, b_be, b_bc = terminal_currents(w{j}, w{k}, {_SHARED}, "
+            f"{_arguments(at + _TRANSPORT_ARGUMENTS, _TERMINAL_ARGUMENTS)})",
             f"i{j} = ic + ib - shift * w{j}",
             f"i{k} = -ic - shift * w{k}",
             f"g{j}_{j} = c_be + b_be - shift",
@@ -96,19 +111,16 @@ def _law_lines(bjts: int, diodes: int, charged: bool) -> tuple[list[str], dict[t
             f"g{k}_{k} = -c_bc - shift",
         ]
         if charged:
-            at = base + 2 + _BJT_LAW_ARGUMENTS
-            diffusion = f"{_arguments(at, 7)}, 0.0, 1.0, 0.5, 0.0, 1.0, 0.5, {_arguments(at + 13, 3)}"
-            lines += _depletion_lines(j, at + 7, at + 13) + _depletion_lines(k, at + 10, at + 13)
+            lines += _depletion_lines(j, charge_at, charge_at + 6) + _depletion_lines(
+                k, charge_at + 3, charge_at + 6
+            )
             lines += [
-                f"if not ({_near(j)} and {_near(k)}):",
-                f"    e{j}, e{k}, t{j}_{j}, t{j}_{k}, t{k}_{k} = bjt_charges(w{j}, w{k}, {diffusion})",
-                f"    x{j} = w{j}",
-                f"    x{k} = w{k}",
-                f"q{j} = b{j} + p{j} * (w{j} - y{j}) + e{j} + t{j}_{j} * (w{j} - x{j}) + t{j}_{k} * (w{k} - x{k})",
-                f"q{k} = b{k} + p{k} * (w{k} - y{k}) + e{k} + t{k}_{k} * (w{k} - x{k})",
-                f"f{j}_{j} = p{j} + t{j}_{j}",
-                f"f{j}_{k} = t{j}_{k}",
-                f"f{k}_{k} = p{k} + t{k}_{k}",
+                f"q{j}, q{k}, f{j}_{j}, f{j}_{k}, f{k}_{k} = diffusion_charges(w{j}, {_SHARED}, "
+                f"{_arguments(charge_at + 7, 2)})",
+                f"q{j} += b{j} + p{j} * (w{j} - y{j})",
+                f"q{k} += b{k} + p{k} * (w{k} - y{k})",
+                f"f{j}_{j} += p{j}",
+                f"f{k}_{k} += p{k}",
                 f"i{j} += per_second * (q{j} - h{j})",
                 f"i{k} += per_second * (q{k} - h{k})",
                 f"g{j}_{j} += per_second * f{j}_{j}",
@@ -124,14 +136,10 @@ def _law_lines(bjts: int, diodes: int, charged: bool) -> tuple[list[str], dict[t
             f"g{j}_{j} = junction_siemens - shift",
         ]
         if charged:
-            diffusion = f"{_arguments(base + 3, 2)}, 0.0, {_arguments(base + 6, 4)}"
             lines += _depletion_lines(j, base + 5, base + 8)
             lines += [
-                f"if not ({_near(j)}):",
-                f"    e{j}, t{j}_{j} = diode_charge(w{j}, {diffusion})",
-                f"    x{j} = w{j}",
-                f"q{j} = b{j} + p{j} * (w{j} - y{j}) + e{j} + t{j}_{j} * (w{j} - x{j})",
-                f"f{j}_{j} = p{j} + t{j}_{j}",
+                f"q{j} = b{j} + p{j} * (w{j} - y{j}) + {_arguments(base + 9, 1)} * junction_amps",
+                f"f{j}_{j} = p{j} + {_arguments(base + 9, 1)} * junction_siemens",
                 f"i{j} += per_second * (q{j} - h{j})",
                 f"g{j}_{j} += per_second * f{j}_{j}",
             ]
@@ -142,27 +150,22 @@ def _law_lines(bjts: int, diodes: int, charged: bool) -> tuple[list[str], dict[t
 def _depletion_lines(j: int, at: int, at_fc: int) -> list[str]:
     """Lines that keep the tangent of a depletion charge, b + p (w - y), near the present voltage."""
     return [
-        f"if not abs(w{j} - y{j}) < {_NEAR_DEPLETION_VOLTS}:",
-        f"    b{j}, p{j} = depletion_charge(w{j}, {_arguments(at, 3)}, parameters[{at_fc}])",
+        f"if not abs(w{j} - y{j}) < {_NEAR_VOLTS} - {_NEAR_RATIO} * min(w{j}, 0.0):",
+        f"    b{j}, p{j} = depletion_charge(w{j}, {_arguments(at, 3)}, {_arguments(at_fc, 1)})",
         f"    y{j} = w{j}",
     ]
-
-
-def _near(j: int) -> str:
-    """A condition: the tangent of the diffusion charges will do, for there is none in reverse or it is near."""
-    return f"(abs(w{j} - x{j}) < {_NEAR_VOLTS} or (w{j} < {_REVERSE_VOLTS} and x{j} < {_REVERSE_VOLTS}))"
 
 
 def _critical(bjts: int, diodes: int) -> list[str]:
     bjt_bases, diode_bases = _bases(bjts, diodes)
     places = [at for base in bjt_bases for at in (base, base + 1)] + diode_bases
-    return [f"parameters[{at}]" for at in places]
+    return [_arguments(at, 1) for at in places]
 
 
 def _evaluate(bjts: int, diodes: int, charged: bool) -> str:
     """Return the function that evaluates all laws on arrays (rare path, many ports)."""
     ports = 2 * bjts + diodes
-    lines = [f"w{j} = volts[{j}]" for j in range(ports)]
+    lines = _constants(bjts, diodes) + [f"w{j} = volts[{j}]" for j in range(ports)]
     if charged:
         lines += [f"h{j} = held[{j}]" for j in range(ports)]
         lines += _no_charges_yet(bjts, diodes)
@@ -194,7 +197,7 @@ def _unrolled(bjts: int, diodes: int, charged: bool) -> str:
         for c in every:
             product = " + ".join(f"k{r}_{m} * {slopes[m, c]}" for m in every if (m, c) in slopes)
             body.append(f"a{r}_{c} = {'1.0 - ' if r == c else '-'}({product})")
-    body += _elimination(ports)
+    body += _elimination(bjts, diodes)
     body += ["change = 0.0", "limited = False"]
     for j in every:
         body += [
@@ -218,9 +221,7 @@ def _unrolled(bjts: int, diodes: int, charged: bool) -> str:
     if charged:
         last += [f"    q{r} += f{r}_{c} * s{c}" for r, c in _charge_slopes(bjts, diodes)]
     last += ["    converged = True", "    break"]
-    lines = [f"k{r}_{c} = feedback[{c}, {r}]" for r in every for c in every]
-    lines += [f"vc{j} = {text}" for j, text in enumerate(_critical(bjts, diodes))]
-    lines += [f"v{j} = state[states + {j}]" for j in every]
+    lines = [f"v{j} = state[states + {j}]" for j in every]
     lines += [f"u{j} = state[states + {2 * ports + j}]" for j in every]
     for j in every:
         # along the parabola where it bends little, along the line at edges
@@ -254,20 +255,44 @@ def _charge_slopes(bjts: int, diodes: int) -> list[tuple[int, int]]:
 def _no_charges_yet(bjts: int, diodes: int) -> list[str]:
     lines: list[str] = []
     for j in range(2 * bjts + diodes):
-        lines += [f"x{j} = 1e300", f"y{j} = 1e300", f"e{j} = 0.0", f"b{j} = 0.0", f"p{j} = 0.0"]
-    return lines + [f"t{r}_{c} = 0.0" for r, c in _charge_slopes(bjts, diodes)]
-
-
-def _elimination(ports: int) -> list[str]:
-    """Lines of Gauss's elimination without pivoting; a poor pivot shows as a step that does not converge."""
-    lines: list[str] = []
-    for pivot in range(ports):
-        lines.append(f"r{pivot} = 1.0 / a{pivot}_{pivot}")
-        for r in range(pivot + 1, ports):
-            lines.append(f"f = a{r}_{pivot} * r{pivot}")
-            lines += [f"a{r}_{c} -= f * a{pivot}_{c}" for c in range(pivot + 1, ports)]
-            lines.append(f"d{r} -= f * d{pivot}")
-    for r in reversed(range(ports)):
-        rest = "".join(f" - a{r}_{c} * d{c}" for c in range(r + 1, ports))
-        lines.append(f"d{r} = (d{r}{rest}) * r{r}")
+        lines += [f"y{j} = 1e300", f"b{j} = 0.0", f"p{j} = 0.0"]
     return lines
+
+
+def _elimination(bjts: int, diodes: int) -> list[str]:
+    """Lines of Gauss's elimination, a device at a time: a transistor's two ports are one pivot.
+
+    There is one division a device, and they wait for each other; a poor pivot shows as a step that does not converge.
+    """
+    ports = 2 * bjts + diodes
+    lines: list[str] = []
+    devices = [(2 * n, 2 * n + 1) for n in range(bjts)] + [(j,) for j in range(2 * bjts, ports)]
+    for pivot in devices:
+        lines += _inverse(pivot)
+        after = range(pivot[-1] + 1, ports)
+        for r in after:
+            for p in pivot:
+                lines.append(f"l{p} = " + " + ".join(f"a{r}_{m} * m{m}_{p}" for m in pivot))
+            for c in after:
+                lines.append(f"a{r}_{c} -= " + " + ".join(f"l{p} * a{p}_{c}" for p in pivot))
+            lines.append(f"d{r} -= " + " + ".join(f"l{p} * d{p}" for p in pivot))
+    for pivot in reversed(devices):
+        for p in pivot:
+            lines.append(f"l{p} = d{p}" + "".join(f" - a{p}_{c} * d{c}" for c in range(pivot[-1] + 1, ports)))
+        for p in pivot:
+            lines.append(f"d{p} = " + " + ".join(f"m{p}_{m} * l{m}" for m in pivot))
+    return lines
+
+
+def _inverse(pivot: tuple[int, ...]) -> list[str]:
+    """Lines that invert a diagonal block of the matrix a into m."""
+    if len(pivot) == 1:
+        return [f"m{pivot[0]}_{pivot[0]} = 1.0 / a{pivot[0]}_{pivot[0]}"]
+    p, q = pivot
+    return [
+        f"inverse = 1.0 / (a{p}_{p} * a{q}_{q} - a{p}_{q} * a{q}_{p})",
+        f"m{p}_{p} = a{q}_{q} * inverse",
+        f"m{q}_{q} = a{p}_{p} * inverse",
+        f"m{p}_{q} = -a{p}_{q} * inverse",
+        f"m{q}_{p} = -a{q}_{p} * inverse",
+    ]

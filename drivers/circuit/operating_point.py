@@ -234,7 +234,7 @@ class _Devices:
         self.critical = np.array(
             [v for bjt in self._bjts for v in bjt[:2]] + [diode[0] for diode in self._diodes]
         )
-        self._nvt = [v for bjt in self._bjts for v in bjt[5:7]] + [diode[2] for diode in self._diodes]
+        self._nvt = [v for bjt in self._bjts for v in bjt[3:5]] + [diode[2] for diode in self._diodes]
 
     def evaluate(self, port_volts: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Return port currents, shape (q,), and their slopes, shape (q, q)."""

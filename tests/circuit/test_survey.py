@@ -111,7 +111,9 @@ def test_a_question_that_makes_no_sense_is_one_clear_line(
 
 def test_without_an_ac_amplitude_the_driving_source_must_be_named() -> None:
     quiet = parse_netlist(DIVIDER.replace(" AC 2", ""))
-    with pytest.raises(BadSurvey, match=r"no source has an AC amplitude; say which one drives .accepted: Vin"):
+    with pytest.raises(
+        BadSurvey, match=r"no source has an AC amplitude; say which one drives .accepted: Vin"
+    ):
         survey(quiet, "out", hz=[100.0])
     two = parse_netlist(DIVIDER.replace(".end", "V2 x 0 AC 1\nR3 x out 1k\n.end"))
     with pytest.raises(BadSurvey, match=r"several sources have an AC amplitude.*Vin, V2"):
