@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import os
-import shutil
 import signal
 import sys
 from collections.abc import Callable, Iterator
@@ -21,13 +20,6 @@ pytestmark = [
 ]
 
 Start = Callable[..., Any]
-
-
-@pytest.fixture
-def root(tmp_path: Path) -> Path:
-    shutil.copy(SOURCES / "bench.toml", tmp_path)
-    shutil.copytree(SOURCES / "limits", tmp_path / "limits")
-    return tmp_path
 
 
 @pytest.fixture

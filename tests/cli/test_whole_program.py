@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import json
 import re
-import shutil
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any, NamedTuple
@@ -12,8 +11,6 @@ from typing import Any, NamedTuple
 import pytest
 
 from fixture.cli.main import main
-
-SOURCES = Path(__file__).parents[2]
 
 
 class Done(NamedTuple):
@@ -30,13 +27,6 @@ class Done(NamedTuple):
 
 
 Toeline = Callable[..., Done]
-
-
-@pytest.fixture
-def root(tmp_path: Path) -> Path:
-    shutil.copy(SOURCES / "bench.toml", tmp_path)
-    shutil.copytree(SOURCES / "limits", tmp_path / "limits")
-    return tmp_path
 
 
 @pytest.fixture
