@@ -84,14 +84,14 @@ def load_kernel(key: KernelKey) -> Kernel:
     """Return a kernel, from the cache where possible; the first time on a machine it takes some seconds."""
     source = kernel_source(key.bjts, key.diodes, key.charged)
     stem = f"kernel_{key.bjts}q_{key.diodes}d{'_charged' if key.charged else ''}"
-    module = _load(stem, source, seconds=round(2.0 + 0.5 * key.ports * (2 if key.charged else 1)))
+    module = _load(stem, source, seconds=round(4.0 + key.ports * (2.3 if key.charged else 1.7)))
     return Kernel(advance=module.advance, settle=module.settle)
 
 
 @lru_cache(maxsize=1)
 def load_filters() -> Filters:
     """Return the compiled filters of `drivers.circuit.resample`."""
-    module = _load("filters", FILTER_SOURCE, seconds=1)
+    module = _load("filters", FILTER_SOURCE, seconds=2)
     return Filters(interpolate=module.interpolate, decimate=module.decimate)
 
 
