@@ -5,6 +5,7 @@ from __future__ import annotations
 import os
 import signal
 import sys
+import time
 from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any
@@ -112,6 +113,18 @@ def test_ctrl_c_at_a_prompt_switches_off_and_closes_the_run_as_stopped(start: St
     history = start("trace", "PT-2612-0001")
     history.expect("! STOPPED")
     assert exit_code(history) == 0
+
+
+@pytest.mark.parametrize("pause_s", [0.0, 0.05, 0.15])
+def test_a_second_ctrl_c_changes_nothing(start: Start, pause_s: float) -> None:
+    child = start("test", "PT-2612-0001", "--hands", "terminal")
+    child.expect("press Enter when done")
+    child.sendintr()
+    time.sleep(pause_s)  # into the cleaning up, the words, the end of Python
+    child.sendintr()
+    child.expect("outputs off, verified")
+    child.expect("! STOPPED: stopped with Ctrl-C")
+    assert exit_code(child) == 130
 
 
 def test_ctrl_c_while_a_scan_is_waited_for_ends_the_session(start: Start) -> None:
