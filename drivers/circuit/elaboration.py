@@ -249,20 +249,33 @@ class _Builder:
         found = self._model_of(part, ("d",))
         if found is None:
             return []
-        law = diode_law(found[1], area=area, celsius=self.celsius, tnom_celsius=self.tnom_celsius)
+        try:
+            law = diode_law(found[1], area=area, celsius=self.celsius, tnom_celsius=self.tnom_celsius)
+        except (ArithmeticError, ValueError):
+            return self._lawless(part)
         anode, cathode = part.nodes
         series: list[Element] = []
         inner = _inner(part, "anode", anode, law.rs_ohms, "rs", series)
         return [*series, Diode(part.name, inner, cathode, replace(law, rs_ohms=0.0))]
+
+    def _lawless(self, part: Part) -> list[Element]:
+        """Each parameter is possible, but together they run out of the numbers at this temperature."""
+        self.report(
+            part.line, f"'{part.name}': .model '{part.model}' has no finite values at {self.celsius:g} °C"
+        )
+        return []
 
     def _bjt(self, part: Part, area: float) -> list[Element]:
         found = self._model_of(part, ("npn", "pnp"))
         if found is None:
             return []
         polarity = 1 if found[0].kind == "npn" else -1
-        law = bjt_law(
-            found[1], polarity=polarity, area=area, celsius=self.celsius, tnom_celsius=self.tnom_celsius
-        )
+        try:
+            law = bjt_law(
+                found[1], polarity=polarity, area=area, celsius=self.celsius, tnom_celsius=self.tnom_celsius
+            )
+        except (ArithmeticError, ValueError):
+            return self._lawless(part)
         collector, base, emitter = part.nodes
         series: list[Element] = []
         collector = _inner(part, "collector", collector, law.rc_ohms, "rc", series)

@@ -135,6 +135,8 @@ def _range_fault(name: str, value: float) -> str:
         return f"M={value:g} must lie from 0 to 0.9 (SPICE limits it there)"
     if name in ("m", "mje", "mjc", "fc") and not 0.0 <= value < 1.0:
         return f"{name.upper()}={value:g} must lie from 0 to below 1"
+    if name == "tnom" and value <= -273.15:
+        return f"TNOM={value:g} lies below absolute zero (in °C)"
     signed = ("xti", "xtb", "tnom", "af")
     if name not in signed and value < 0.0:
         return f"{name.upper()}={value:g} must not be negative"

@@ -16,6 +16,7 @@ from pyvisa.constants import ResourceAttribute, StatusCode
 from pyvisa.highlevel import VisaLibraryBase
 from pyvisa.util import LibraryPath
 
+from drivers.foreign import mapped_errors
 from drivers.simulated.scpi_device import ByteDevice
 
 _numbers: Final = itertools.count(1)
@@ -74,13 +75,16 @@ class SimulatedVisaLibrary(VisaLibraryBase):
 
         Raises
         ------
-        pyvisa.rname.InvalidResourceName
+        BackendUnavailable
             A key is no VISA resource name.
         """
         path = f"simulated-{next(_numbers)}"
         library = cls(LibraryPath(path, "simulated"))
         assert isinstance(library, SimulatedVisaLibrary)
-        library._devices = {rname.to_canonical_name(name): device for name, device in devices.items()}
+        library._devices = {}
+        for name, device in devices.items():
+            with mapped_errors(f'simulated instrument "{name}"'):
+                library._devices[rname.to_canonical_name(name)] = device
         return library
 
     def _init(self) -> None:

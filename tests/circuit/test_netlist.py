@@ -19,11 +19,28 @@ from drivers.circuit.elements import (
     Vcvs,
     VoltageSource,
 )
-from drivers.circuit.errors import BadNetlist, UnknownName
+from drivers.circuit.errors import BadNetlist, CircuitError, UnknownName
 from drivers.circuit.netlist import elaborate, parse_netlist, read_netlist
+from drivers.circuit.operating_point import solve_operating_point
 
 DECKS = Path(__file__).parent / "decks"
 PEAT = Path(__file__).parents[2] / "limits" / "peat" / "circuit.cir"
+ODD_PIECES = [
+    "0",
+    "-1",
+    "1e999",
+    "nan",
+    "1e-300",
+    "{",
+    "}",
+    "=",
+    "(",
+    "+",
+    "\n+",
+    "\n.param a={a}",
+    ".end\n",
+    "9" * 40,
+]
 
 
 def faults_of(text: str) -> list[str]:
@@ -270,6 +287,8 @@ R9 a 0 4k7
         ("R1 a 0 1\nR2 a 0 x", 3, "a parameter is written {x}"),
         ("R1 a 0 {1 + 2", 2, "unmatched brace"),
         ("R1 a 0 1\n.control\nrun", 3, ".control without .endc"),
+        ("R1 a 0 1\nD1 a 0 DX\n.model DX D(TNOM=-300)", 4, "TNOM=-300 lies below absolute zero"),
+        ("R1 a 0 1\nD1 a 0 DX\n.model DX D(EG=1e6)\n.temp 60", 3, "has no finite values"),
     ],
 )
 def test_each_fault_of_wiring_or_values_is_one_line_that_names_what_is_to_blame(
@@ -351,3 +370,19 @@ def test_whatever_a_file_holds_the_answer_is_a_circuit_or_a_list_of_faults(
     except BadNetlist as bad:
         assert bad.faults
         assert all(str(fault).startswith("f.cir:") and "\n" not in str(fault) for fault in bad.faults)
+
+
+@settings(max_examples=200, deadline=None)
+@given(data=st.data())
+def test_whatever_is_done_to_a_netlist_the_answer_is_a_circuit_or_faults_with_lines(
+    data: st.DataObject,
+) -> None:
+    text = (DECKS / "silicon_amplifier.cir").read_text(encoding="utf-8")
+    for _ in range(data.draw(st.integers(1, 4))):
+        at = data.draw(st.integers(0, len(text)))
+        piece = data.draw(st.text(max_size=4) | st.sampled_from(ODD_PIECES))
+        text = text[:at] + piece + text[at + data.draw(st.integers(0, 30)) :]
+    try:
+        solve_operating_point(elaborate(parse_netlist(text)))
+    except CircuitError as error:
+        assert str(error)
