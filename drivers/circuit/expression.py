@@ -10,6 +10,7 @@ import math
 import re
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from functools import lru_cache
 
 from drivers.circuit.errors import BadExpression, nearest_names
 
@@ -115,6 +116,7 @@ def _tokens(text: str) -> list[_Token]:
     return found
 
 
+@lru_cache(maxsize=4096)
 def names_in(text: str) -> frozenset[str]:
     """Return the lower-case names of the parameters that an expression uses.
 
@@ -148,8 +150,18 @@ def evaluate(text: str, values: Mapping[str, float]) -> float:
     BadExpression
         When it cannot be read, names something unknown, or has no finite value.
     """
+    # the same cards are evaluated again for every position of a knob or relay
+    needed = names_in(text)
+    if needed <= values.keys():
+        return _evaluate(text, tuple((name, values[name]) for name in sorted(needed)))
+    return _evaluate(text, tuple(values.items()))  # says what is unknown, and what is known
+
+
+@lru_cache(maxsize=4096)
+def _evaluate(text: str, named: tuple[tuple[str, float], ...]) -> float:
     if _SIGNED.fullmatch(text.strip()):
         return read_number(text)
+    values = dict(named)
     reader = _Reader(text, values)
     try:
         result = float(reader.whole())
