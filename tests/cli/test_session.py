@@ -19,7 +19,7 @@ from fixture.bench.placing import Placement
 from fixture.bench.planted import plant_faults
 from fixture.cli.session import TestSession, TestWishes
 from fixture.cli.surroundings import Surroundings
-from fixture.domain.model import Model
+from fixture.domain.model import Model, Procedure
 from fixture.domain.options import ReadingSpec
 from fixture.domain.reading import Curve, Reading
 from fixture.domain.run import BenchIdentity
@@ -116,6 +116,7 @@ class Counter:
         place: Placement | None,
         *,
         model: Model,
+        procedure: Procedure,
         operator: Operator,
         pace: str,
         notice: Callable[[str], None],

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import re
+import shutil
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any, NamedTuple
@@ -185,3 +186,28 @@ def test_a_fault_of_the_models_netlist_is_told_with_its_line(
     assert (done.code, done.out) == (2, "")
     assert f"{path}:{where + 1}: " in done.err
     assert said.lower() in done.err.lower()
+
+
+@pytest.mark.parametrize("words", ["open Rload", "value Rsrc x10"])
+def test_a_fault_in_a_part_whose_place_the_bench_takes_is_refused(toeline: Toeline, words: str) -> None:
+    done = toeline("test", "PT-2612-0001", "--plant", words)
+    assert (done.code, done.out) == (2, "")
+    assert "stands outside the pedal, the bench takes its place" in done.err
+
+
+def test_a_bench_without_a_probe_that_the_procedure_reads_is_refused_before_power(
+    toeline: Toeline, root: Path
+) -> None:
+    edit(root / "bench.toml", r"^TP3 = 123\b", "TP9 = 123")
+    done = toeline("test", "PT-2612-0001")
+    assert (done.code, done.out, done.err.count("\n")) == (2, "", 1)
+    assert "[switchbox.probes] lacks TP3 (q2_collector)" in done.err
+    assert not any("PT-2612-0001" in path.read_text() for path in root.glob("logs/**/*.csv"))
+
+
+def test_two_models_that_take_the_same_serials_are_found_by_the_check(toeline: Toeline, root: Path) -> None:
+    shutil.copytree(root / "limits" / "peat", root / "limits" / "marl")
+    edit(root / "limits" / "marl" / "limits.toml", r'^name = "peat"', 'name = "marl"')
+    done = toeline("limits", "check")
+    assert done.code == 2 and done.err.count("\n") == 1
+    assert "a scan would not tell the model" in done.err

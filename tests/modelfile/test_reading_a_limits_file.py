@@ -139,6 +139,16 @@ ONE_FAULT = {
         'low = "1 dB"',
         "this reading is a curve: mask = [[hz, low_db, high_db], ...] is wanted",
     ),
+    "a current limit that holds a good unit back": (
+        'current_limit = "20 mA"',
+        'current_limit = "1 mA"',
+        "1.000 mA would hold a good unit back, which may draw 1.100 mA",
+    ),
+    "a node's limits of the wrong sign": (
+        '{ low = "-1.2 V", high = "-0.3 V" }',
+        '{ low = "0.3 V", high = "1.2 V" }',
+        'with supply.ground = "positive" its volts are negative',
+    ),
     "over-voltage under the volts": ('"10 V"', '"8 V"', "8 V must exceed volts = 9 V"),
     "a pattern that does not compile": (r"'PT-\d{4}-\d{4}'", "'PT-('", "is not a regular expression"),
     "a serial in lower case": ('"PT-2612-0001"', '"pt-2612-0001"', 'is scanned as "PT-2612-0001"'),
@@ -230,3 +240,21 @@ def test_a_mark_from_an_editor_and_other_line_ends_do_no_harm(
     text = peat_file.read_text(encoding="utf-8")
     peat_file.write_bytes(b"\xef\xbb\xbf" + text.replace("\n", "\r\n").encode())
     assert load_model(peat_file, kinds).name == "Peat"
+
+
+def test_the_wrong_ground_is_refused_by_the_limits_that_it_contradicts(peat_file: Path) -> None:
+    edit(peat_file, {'ground = "positive"': 'ground = "negative"'})
+    with pytest.raises(BadFile) as caught:
+        load_model(peat_file)
+    assert len(caught.value.faults) == 2
+    assert all("its volts are positive" in fault.text for fault in caught.value.faults)
+
+
+@pytest.mark.parametrize(
+    ("old", "new"),
+    [("Vsup  supply 0   DC -9", "Vsup  0 supply   DC -9"), ("DC -9", "DC -12"), ("DC -9", "DC 9")],
+)
+def test_a_netlist_of_another_supply_is_refused(peat_file: Path, old: str, new: str) -> None:
+    edit(peat_file.parent / "circuit.cir", {old: new})
+    with pytest.raises(BadFile, match=r"Vsup holds supply at .* mean -9\.000 V"):
+        load_model(peat_file)

@@ -46,6 +46,7 @@ class FakeBench:
     rate_hz: int = 48000
     mains_hz: float = 50.0
     nodes: Mapping[str, Callable[[float], float]] = field(default_factory=dict)
+    rail_volts: float = -8.99
     u_volts: float = 1e-4
     failure: Exception | None = None
     clock: FakeClock = field(default_factory=FakeClock)
@@ -63,7 +64,7 @@ class FakeBench:
         return Measured(self.nodes[node.name](self.clock.now_s), "V", self.u_volts)
 
     def read_rail(self) -> Measured:
-        return Measured(-8.99, "V", 1e-3)
+        return Measured(self.rail_volts, "V", 1e-3)
 
     def read_supply_current(self) -> Measured:
         return Measured(self.nodes["amps"](self.clock.now_s), "A", 1e-7)

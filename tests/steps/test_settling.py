@@ -7,6 +7,7 @@ import math
 import pytest
 
 from fixture.bench.facade import FixtureState
+from fixture.errors import CannotMeasure
 
 
 def test_a_node_is_read_when_it_has_settled(run_step, make_bench) -> None:
@@ -63,3 +64,9 @@ def test_supply_current_settles_and_the_rail_is_read(run_step, make_bench, state
         ("controls", {"fuzz": 1.0}),
         ("state", FixtureState(source="short", engaged=engaged)),
     ]
+
+
+def test_a_supply_the_wrong_way_round_is_the_bench_s_fault_and_is_seen_first(run_step, make_bench) -> None:
+    bench = make_bench(nodes={"amps": lambda t: 1e-3}, rail_volts=8.99)
+    with pytest.raises(CannotMeasure, match=r"wrong way round \(9\.0 V at the rail, positive ground\)"):
+        run_step(bench, "supply_current")
