@@ -148,11 +148,16 @@ class MultimeterByHand:
         self._dc = HandAccuracy(0.005, 0.0, 0.001) if dc is None else dc
         self._ac = HandAccuracy(0.01, 0.0, 0.001) if ac is None else ac
         self._ohms = HandAccuracy(0.01, 0.0, 0.1) if ohms is None else ohms
+        self._of = ""
 
     @property
     def input_ohms(self) -> float:
         """What the meter loads a node with."""
         return self._input_ohms
+
+    def point_at(self, what: str) -> None:
+        """Hear what the next readings are of, for the prompts."""
+        self._of = f" at {what}"
 
     def identify(self) -> Identity:
         """Return that a person plays the multimeter."""
@@ -160,19 +165,25 @@ class MultimeterByHand:
 
     def read_dc_volts(self, *, expect_volts: float | None = None, power_line_cycles: float = 1.0) -> Measured:
         """Have a DC voltage read and typed."""
-        prompt = Prompt(f"Multimeter, DC volts{_expectation(expect_volts, 'V')}: which voltage does it show?")
+        prompt = Prompt(
+            f"Multimeter{self._of}, DC volts{_expectation(expect_volts, 'V')}: which voltage does it show?"
+        )
         value = self._operator.ask_value(prompt, unit="V", low=-self._max_volts, high=self._max_volts)
         return self._dc.measured(value, "V")
 
     def read_ac_volts(self, *, expect_volts: float | None = None) -> Measured:
         """Have an AC voltage read and typed."""
-        prompt = Prompt(f"Multimeter, AC volts{_expectation(expect_volts, 'V')}: which voltage does it show?")
+        prompt = Prompt(
+            f"Multimeter{self._of}, AC volts{_expectation(expect_volts, 'V')}: which voltage does it show?"
+        )
         value = self._operator.ask_value(prompt, unit="V", low=0.0, high=self._max_volts)
         return self._ac.measured(value, "V")
 
     def read_ohms(self, *, expect_ohms: float | None = None) -> Measured:
         """Have a resistance read and typed."""
-        prompt = Prompt(f"Multimeter, ohms{_expectation(expect_ohms, 'Ω')}: which resistance does it show?")
+        prompt = Prompt(
+            f"Multimeter{self._of}, ohms{_expectation(expect_ohms, 'Ω')}: which resistance does it show?"
+        )
         value = self._operator.ask_value(prompt, unit="Ω", low=0.0, high=1e9)
         return self._ohms.measured(value, "Ω")
 

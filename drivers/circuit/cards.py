@@ -119,7 +119,9 @@ class Netlist:
         for part in self.parts:
             if part.name.lower() == name.lower():
                 return part
-        known = nearest_names(name, (part.name for part in self.parts))
+        names = [part.name for part in self.parts]
+        alike = [one for one in names if one[:1].lower() == name[:1].lower()]
+        known = nearest_names(name, alike or names)
         raise UnknownName(f"{self.path}: no part '{name}' {known}")
 
     def model(self, name: str) -> Model:

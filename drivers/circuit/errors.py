@@ -20,6 +20,16 @@ from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 
+_MOST_SHOWN = 40
+_LONGEST_LINE = 300
+
+
+def _printable(text: str) -> str:
+    """Return a line that a terminal can bear: a file that is no netlist is quoted in it."""
+    clean = "".join(c if c.isprintable() else "\ufffd" for c in text)
+    return clean if len(clean) <= _LONGEST_LINE else f"{clean[:_LONGEST_LINE]}..."
+
+
 class CircuitError(Exception):
     """Root of all errors of `drivers.circuit`."""
 
@@ -47,7 +57,10 @@ class BadNetlist(CircuitError):
 
     def __init__(self, faults: Sequence[NetlistFault]) -> None:
         self.faults = tuple(sorted(faults, key=lambda fault: fault.line))
-        super().__init__("\n".join(str(fault) for fault in self.faults))
+        lines = [_printable(str(fault)) for fault in self.faults[:_MOST_SHOWN]]
+        if len(self.faults) > _MOST_SHOWN:
+            lines.append(f"and {len(self.faults) - _MOST_SHOWN} more: is this a netlist?")
+        super().__init__("\n".join(lines))
 
 
 class BadExpression(CircuitError):

@@ -5,6 +5,7 @@ from __future__ import annotations
 import re
 from collections.abc import Mapping
 from dataclasses import dataclass
+from difflib import get_close_matches
 
 from drivers.circuit.errors import BadExpression, BadPartFault
 from drivers.circuit.expression import read_number
@@ -64,6 +65,18 @@ _FORMS = (
     _Form("lift", "lift Q1 e", 1, 2),
     _Form("reversed", "reversed D1", 1, 1),
 )
+_SYNONYMS = {
+    "missing": "open",
+    "break": "open",
+    "broken": "open",
+    "cut": "open",
+    "no": "open",
+    "shorted": "short",
+    "reverse": "reversed",
+    "flipped": "reversed",
+    "leak": "leaky",
+    "leaks": "leaky",
+}
 _ACCEPTED = "; ".join(form.example for form in _FORMS)
 _CODE = re.compile(r"(\d+)([RrkKMmuµnpGg])(\d+)")
 _CODE_FACTORS = {
@@ -97,14 +110,29 @@ def parse_fault(words: str) -> PartFault:
         if lowered == form.kind or lowered.startswith(form.kind + " "):
             break
     else:
-        raise BadPartFault(f"'{words}': not a fault (accepted: {_ACCEPTED})")
+        raise BadPartFault(f"'{words}': not a fault{_nearest_form(said)} (accepted: {_ACCEPTED})")
     targets = said[len(form.kind.split()) :]
     amount = None
-    if form.with_amount and targets:
+    if form.with_amount and len(targets) > 1:
         amount = _read_amount(words, targets.pop(), form)
     if not form.least <= len(targets) <= form.most:
-        raise BadPartFault(f"'{words}': not complete or too long (accepted: {form.example})")
+        wrong = "too short" if len(targets) < form.least else "too long"
+        raise BadPartFault(f"'{words}': {wrong}: write it like '{form.example}'")
+    if form.with_amount and amount is None:
+        raise BadPartFault(f"'{words}': the amount is missing: write it like '{form.example}'")
     return PartFault(" ".join(said), form.kind, tuple(targets), amount)
+
+
+def _nearest_form(said: list[str]) -> str:
+    """Offer the form that was meant: a word of it in another place, or another word for it."""
+    for word in (said[0], *said[-1:]) if said else ():
+        meant = _SYNONYMS.get(word.lower()) or next(
+            iter(get_close_matches(word.lower(), [form.kind for form in _FORMS], n=1, cutoff=0.7)), None
+        )
+        if meant:
+            others = " ".join(other for other in said if other != word)
+            return f", did you mean '{meant} {others}'?"
+    return ""
 
 
 def _read_amount(words: str, text: str, form: _Form) -> Amount:

@@ -168,7 +168,9 @@ def _own_model(netlist: Netlist, wanted: str, fault: PartFault) -> Model:
     for model in netlist.models:
         if model.name == wanted.lower():
             return model
-    known = ", ".join(model.name for model in netlist.models)
+    known = ", ".join(
+        model.name for model in netlist.models if "@" not in model.name
+    )  # not a part's own copy
     raise _refuse(
         fault,
         f"no model '{wanted}' (accepted: {known}, silicon npn, silicon pnp, germanium npn, germanium pnp, "
@@ -203,7 +205,8 @@ def _gain(netlist: Netlist, fault: PartFault) -> Netlist:
 def _backwards(netlist: Netlist, fault: PartFault) -> Netlist:
     pot = _find_pot(netlist, fault.targets[0])
     if pot is None:
-        pots = [part.name[1:-2] for part in netlist.parts if part.name.lower().endswith("_a")]
+        tops = [part for part in netlist.parts if part.name.lower().endswith("_a")]
+        pots = [name for top in tops for name in (top.name[1:-2], *sorted(_names(top.value)))]
         raise _refuse(fault, f"no pot '{fault.targets[0]}' {nearest_names(fault.targets[0], pots)}")
     swapped = netlist.with_part(replace(pot.top, value=pot.bottom.value))
     return swapped.with_part(replace(pot.bottom, value=pot.top.value))

@@ -78,7 +78,7 @@ class CircuitSurvey:
 
     title: str
     celsius: float
-    probe: str
+    probe: str | None
     source: str | None
     node_volts: Mapping[str, float]
     source_amps: Mapping[str, float]
@@ -89,7 +89,7 @@ class CircuitSurvey:
 
 def survey(
     netlist: Netlist,
-    probe: str,
+    probe: str | None,
     *,
     hz: Sequence[float] = (),
     sines: Sequence[Sine] = (),
@@ -104,7 +104,7 @@ def survey(
     ----------
     netlist : Netlist
     probe : str
-        A node, or two with a comma for their difference.
+        A node, or two with a comma for their difference; None when neither response nor sines are asked for.
     hz : sequence of float
         Frequencies of the small-signal response.
     sines : sequence of Sine
@@ -127,7 +127,7 @@ def survey(
     """
     _check(hz, sines)
     circuit = elaborate(netlist, params=params, celsius=celsius)
-    node = _probe(circuit, probe)
+    node = "0" if probe is None else _probe(circuit, probe)
     driving = _driving_source(circuit, source) if hz or sines or source else None
     point = solve_operating_point(circuit)
     points: tuple[ResponsePoint, ...] = ()

@@ -59,8 +59,7 @@ def pipe(typist: Typist) -> InputLines:
 
 def test_scans_come_one_after_another_until_the_end() -> None:
     lines = InputLines.of(io.StringIO("PT-2612-0001\r\n\n   \npt-2612-0002"))
-    assert [lines.next_scan(), lines.next_scan(), lines.next_scan()] == ["PT-2612-0001", "pt-2612-0002", None]
-    assert lines.next_scan() is None
+    assert [lines.next_scan() for _ in range(6)] == ["PT-2612-0001", "", "   ", "pt-2612-0002", None, None]
 
 
 def test_a_file_of_serials_is_tested_to_its_end(tmp_path: Path) -> None:

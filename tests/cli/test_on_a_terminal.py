@@ -63,14 +63,14 @@ def test_the_live_view_shows_each_reading_and_the_verdict_by_word_and_sign(start
     child.expect("PT-2612-0001  Peat")
     child.expect("SIMULATED BENCH")
     child.expect("supply current")
-    child.expect(r"\+ PASS: ")
+    child.expect(r"\+ PASS  PT-")
     assert exit_code(child) == 0
 
 
 @pytest.mark.parametrize("plain", [{"NO_COLOR": "1"}, {"TERM": "dumb"}])
 def test_whoever_wants_no_colour_gets_no_escape_sequence(start: Start, plain: dict[str, str]) -> None:
     child = start("test", "PT-2612-0001", **plain)
-    child.expect(r"\+ PASS: ")
+    child.expect(r"\+ PASS  PT-")
     assert "\x1b" not in child.before
     assert exit_code(child) == 0
 
@@ -81,7 +81,7 @@ def test_units_are_scanned_one_after_another_and_a_scan_in_between_is_not_used(s
     child.sendline("PT-2612-0001")
     child.expect("attempt 1")  # the run is open
     child.sendline("PT-2612-0099")
-    child.expect(r"PASS: ")
+    child.expect(r"PASS  PT-")
     child.expect("'PT-2612-0099' was scanned during the test and not used")
     child.expect("scan the next serial")
     child.sendline("pt-2612-0002")
@@ -99,7 +99,7 @@ def test_a_person_answers_prompts_with_enter_and_a_scan_is_no_answer(start: Star
     for _ in range(3):
         child.expect("press Enter when done")
         child.sendline("")
-    child.expect(r"\+ PASS: ")
+    child.expect(r"\+ PASS  PT-")
     assert exit_code(child) == 0
 
 
@@ -108,7 +108,7 @@ def test_ctrl_c_at_a_prompt_switches_off_and_closes_the_run_as_stopped(start: St
     child.expect("press Enter when done")
     child.sendintr()
     child.expect("outputs off, verified")
-    child.expect("! STOPPED: stopped with Ctrl-C")
+    child.expect("! STOPPED  PT-2612-0001: Ctrl-C was pressed")
     assert exit_code(child) == 130
     history = start("trace", "PT-2612-0001")
     history.expect("! STOPPED")
@@ -123,7 +123,7 @@ def test_a_second_ctrl_c_changes_nothing(start: Start, pause_s: float) -> None:
     time.sleep(pause_s)  # into the cleaning up, the words, the end of Python
     child.sendintr()
     child.expect("outputs off, verified")
-    child.expect("! STOPPED: stopped with Ctrl-C")
+    child.expect("! STOPPED  PT-2612-0001: Ctrl-C was pressed")
     assert exit_code(child) == 130
 
 
@@ -147,7 +147,7 @@ def test_a_second_test_is_refused_while_one_holds_the_bench(start: Start) -> Non
 @pytest.mark.parametrize(
     ("sent", "code", "words"),
     [
-        (signal.SIGTERM, 143, r"stopped by the system \(SIGTERM\)"),
+        (signal.SIGTERM, 143, r"the system ended the program \(SIGTERM\)"),
         (signal.SIGHUP, 129, r"the terminal was closed \(SIGHUP\)"),
     ],
 )
@@ -155,5 +155,5 @@ def test_termination_closes_the_run(start: Start, sent: signal.Signals, code: in
     child = start("test", "PT-2612-0001", "--hands", "terminal")
     child.expect("press Enter when done")
     os.kill(child.pid, sent)
-    child.expect(f"! STOPPED: .*{words}")
+    child.expect(f"! STOPPED  PT-2612-0001: .*{words}")
     assert exit_code(child) == code

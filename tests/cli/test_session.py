@@ -149,13 +149,13 @@ def test_a_good_unit_is_zero_and_shown_beside_its_limits(counter: Counter) -> No
     lines = shown.splitlines()
     assert lines[0] == "... compiling something"
     assert lines[1] == "PT-2612-0001  Peat germanium fuzz, limits revision 4 (predicted)"
-    assert "SIMULATED BENCH: no such unit is on a bench" in lines[2]
-    assert "[1/2] power on" in lines and "[2/2] Rails" in lines
+    assert "SIMULATED BENCH: no real pedal is tested" in lines[2]
+    assert "[0/1] power on" in lines and "[1/1] Rails" in lines
     assert "  > Fuzz fully right." in lines
     (rail,) = (line for line in lines if " rail " in line)
     assert rail.split() == ["+", "PASS", "rail", "-9.000", "V", "-9.200", "V", "to", "-8.800", "V"]
     assert "outputs off, verified" in lines
-    assert lines[-1].startswith("+ PASS: ")
+    assert lines[-1].startswith("+ PASS  PT-")
     header = counter.journal.opened[0]
     assert (header.serial, header.scanned, header.operator) == ("PT-2612-0001", " pt-2612-0001 ", "A. Tester")
     assert counter.bench.log[-1] == "bench.close"
@@ -165,10 +165,10 @@ def test_a_failed_unit_is_one_and_says_what_failed_in_words(counter: Counter) ->
     counter.given = (volts("rail", -5.0), volts("open_end", 0.5))
     assert counter.session().test_one("PT-2612-0001") == 1
     lines = counter.out.getvalue().splitlines()
-    assert any(line.startswith("x FAIL: ") for line in lines)
+    assert any(line.startswith("x FAIL  PT-") for line in lines)
     (said,) = (line for line in lines if line.startswith("  x Rails: rail "))
     assert "allowed" in said
-    assert lines[-1] == "history of this unit: toeline trace PT-2612-0001"
+    assert lines[-2] == "history of this unit: toeline trace PT-2612-0001"
 
 
 def test_a_bench_that_breaks_down_is_three(counter: Counter) -> None:
@@ -177,7 +177,7 @@ def test_a_bench_that_breaks_down_is_three(counter: Counter) -> None:
 
     counter.given = (gone,)
     assert counter.session().test_one("PT-2612-0001") == 3
-    assert "? NOT MEASURED: Rails: meter: gone" in counter.out.getvalue()
+    assert "? NOT MEASURED  PT-2612-0001: Rails: meter: gone" in counter.out.getvalue()
     assert "! bench: Rails: meter: gone" in counter.out.getvalue()
 
 
@@ -185,7 +185,7 @@ def test_a_bench_that_breaks_down_is_three(counter: Counter) -> None:
 def test_a_stopped_run_has_the_code_of_its_signal(counter: Counter, by: str, code: int) -> None:
     counter.given = (GOOD[0], lambda: counter.stop.request(by), GOOD[1])
     assert counter.session().test_one("PT-2612-0001") == code
-    assert "! STOPPED: " in counter.out.getvalue()
+    assert "! STOPPED  PT-" in counter.out.getvalue()
     assert counter.journal.closed[0].verdict.value == "STOPPED"
 
 
@@ -232,7 +232,7 @@ def test_in_json_what_is_not_a_number_is_null_and_a_curve_has_its_mask(counter: 
 @pytest.mark.parametrize(
     ("scanned", "wishes", "error", "said"),
     [
-        ("QQ-1", {}, UnknownSerial, r"PT-\\d\{4\}"),
+        ("QQ-1", {}, UnknownSerial, "PT-2612-0001"),
         ("???", {}, BadInput, "not a serial"),
         ("PT-2612-0001", {"model": "peet"}, UnknownModel, "did you mean peat"),
         ("QQ-1", {"model": "peat"}, UnknownSerial, "look like PT-2612-0001"),
@@ -309,7 +309,7 @@ def test_records_that_become_unsafe_end_the_session(counter: Counter) -> None:
     with pytest.raises(RecordsUnsafe):
         counter.session().test_scans()
     assert len(counter.journal.opened) == 1
-    assert "PASS: " not in counter.out.getvalue()
+    assert "PASS  PT-" not in counter.out.getvalue()
 
 
 def test_a_stop_ends_the_session_after_the_run_was_closed(counter: Counter) -> None:

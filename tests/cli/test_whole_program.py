@@ -76,7 +76,7 @@ def test_a_planted_fault_fails_in_words_stays_with_the_serial_and_is_mended(
     failed = toeline("test", "PT-2612-0002", "--plant", "open C1")
     assert failed.code == 1
     assert "planted in this unit: open C1" in failed.out
-    assert "x FAIL: " in failed.out
+    assert "x FAIL  PT-" in failed.out
     assert re.search(r"^  x .*gain .*allowed", failed.out, re.MULTILINE)
     assert "toeline trace PT-2612-0002" in failed.out
     assert toeline("test", "PT-2612-0002", "--json").json["planted"] == ["open C1"]

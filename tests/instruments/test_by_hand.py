@@ -81,6 +81,19 @@ def test_values_beyond_the_supply_are_refused():
         supply.set_volts(13.0)
 
 
+def test_a_person_at_the_meter_is_told_what_is_read():
+    person = Person(-8.99, -4.9)
+    meter = MultimeterByHand(person)
+    meter.point_at("the pedal's supply rail")
+    meter.read_dc_volts(expect_volts=-9.0)
+    meter.point_at("TP3 (q2 collector)")
+    meter.read_dc_volts()
+    assert [text.split(":")[0] for text in person.asked] == [
+        "Multimeter at the pedal's supply rail, DC volts (range for -9 V)",
+        "Multimeter at TP3 (q2 collector), DC volts",
+    ]
+
+
 def test_an_implausible_voltage_is_asked_for_again():
     assert MultimeterByHand(Person(5e6, -4.9)).read_dc_volts(expect_volts=-5.0).value == -4.9
 

@@ -180,7 +180,13 @@ def revisions(draw: st.DrawFn) -> Revision:
 
 
 @settings(max_examples=40, deadline=None)
-@given(current=bounds("A", most=0.019), node=bounds("V", most=0.0), gain=bounds("dB"), mask=masks(), revision=revisions())
+@given(
+    current=bounds("A", most=0.019),
+    node=bounds("V", most=0.0),
+    gain=bounds("dB"),
+    mask=masks(),
+    revision=revisions(),
+)
 def test_whatever_is_written_is_read_back_equal(
     kinds: Any, current: Limits, node: Limits, gain: Limits, mask: Mask, revision: Revision
 ) -> None:

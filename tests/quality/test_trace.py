@@ -74,7 +74,7 @@ def test_a_serial_is_found_as_people_type_it(station: Station, typed: str) -> No
 
 def test_an_unknown_serial_is_refused_and_the_nearest_are_offered(station: Station) -> None:
     write_history(station)
-    with pytest.raises(UnknownSerial, match="nearest are PT-2612-000") as caught:
+    with pytest.raises(UnknownSerial, match="the most alike: PT-2612-000") as caught:
         run_command(station.root, "PT-2612-0011")
     assert caught.value.exit_code == 2
     with pytest.raises(UnknownSerial, match="2 serials are known, none is like it"):
@@ -147,19 +147,19 @@ def test_the_text_is_readable_and_keeps_simulated_runs_apart(
         "x FAIL  2026-01-12 08:00:00 +0000  attempt 1",
         "  bench north (real), peat, limits revision 1, run north-20260112-R000001",
         "  a reason",
-        "  x Q2 collector -8.71 V, allowed -6.00 to -3.20 V",
+        "  x nodes: Q2 collector -8.71 V, allowed -6.00 to -3.20 V",
         "",
         "+ PASS  2026-01-12 09:00:02 +0000  attempt 2",
         "  bench north (real), peat, limits revision 1, run north-20260112-R000009",
         "  a reason",
         "",
-        "== SIMULATED BENCH: no such unit was on a bench ==",
+        "== SIMULATED BENCH: no real pedal was tested ==",
         "",
         "x FAIL  2026-01-12 09:00:02 +0000  attempt 1",
         "  bench demo (simulated), peat, limits revision 1, run demo-20260112-S000001",
         "  planted: open R3",
         "  a reason",
-        "  x Q2 collector -8.71 V, allowed -6.00 to -3.20 V",
+        "  x nodes: Q2 collector -8.71 V, allowed -6.00 to -3.20 V",
     ]
 
 

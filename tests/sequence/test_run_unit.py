@@ -277,7 +277,7 @@ def test_ctrl_c_in_the_bench_closes_the_run_as_stopped(line: Line, where: str) -
     line.bench.on = {where: raising(KeyboardInterrupt())}
     result = line.test({"nodes": GOOD}, step("rails", "nodes", controls={"fuzz": 1.0}))
     assert result.verdict is Verdict.STOPPED
-    assert result.reason == "stopped with Ctrl-C"
+    assert result.reason == "Ctrl-C was pressed"
     assert line.journal.closed == [result]
     assert not line.bench.powered
 
