@@ -19,7 +19,6 @@ import difflib
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
-
 _MOST_SHOWN = 40
 _LONGEST_LINE = 300
 
