@@ -50,6 +50,8 @@ def read_part(words: list[str], line: int, note: Callable[[str], None]) -> Part:
     if kind in "vi":
         value, ac, phase = _source(name, rest, note)
         return Part(name, nodes, value, line, ac=ac, ac_phase=phase)
+    if kind in "cldq":
+        rest = _without_initial_values(name, rest, note)
     if kind in "dq":
         model, area = _model_and_area(name, rest)
         return Part(name, nodes, area, line, model=model)
@@ -136,6 +138,19 @@ def _wave_at_zero(name: str, rest: list[str], i: int) -> tuple[str, int]:
         i += 1
     first = 1 if word == "pwl" else 0
     return (numbers[first] if len(numbers) > first else "0"), i
+
+
+def _without_initial_values(name: str, rest: list[str], note: Callable[[str], None]) -> list[str]:
+    """Leave ``IC=...`` out: it counts only for a transient that begins with UIC."""
+    lowered = [word.lower() for word in rest]
+    for at in range(len(rest) - 1):
+        if lowered[at] == "ic" and rest[at + 1] == "=":
+            end = at + 2
+            while end < len(rest) and _is_value(rest[end]):
+                end += 1
+            note(f"'{name}': IC passed over: it counts only for a transient with UIC")
+            return rest[:at] + rest[end:]
+    return rest
 
 
 def _model_and_area(name: str, rest: list[str]) -> tuple[str, str]:

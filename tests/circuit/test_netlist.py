@@ -308,6 +308,16 @@ def test_a_model_parameter_without_effect_here_is_accepted_at_its_neutral_value(
     assert any(isinstance(e, Bjt) for e in circuit.elements)
 
 
+def test_initial_values_are_passed_over_with_a_note() -> None:
+    netlist = parse_netlist(
+        "t\nR1 a 0 1k\nC1 a 0 1u ic=2\nL1 a 0 1m IC = 1m\nQ1 a a 0 N IC=0.6, 5\nD1 a 0 DX off ic=0.7\n"
+        ".model N NPN\n.model DX D\n"
+    )
+    assert len(netlist.notes) == 4
+    assert "'C1': IC passed over: it counts only for a transient with UIC" in netlist.notes[0]
+    assert len(elaborate(netlist).elements) == 5
+
+
 def test_a_file_that_is_not_there_or_empty_is_one_clear_line(tmp_path: Path) -> None:
     with pytest.raises(BadNetlist, match=r"none\.cir: cannot be read \(No such file or directory\)"):
         read_netlist(tmp_path / "none.cir")
