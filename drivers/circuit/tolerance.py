@@ -92,17 +92,30 @@ def draw_unit(netlist: Netlist, spreads: Sequence[Spread], key: str) -> Netlist:
     UnknownName
         When a spread matches no part, no .param, or no part whose model has the parameter.
     """
+    drawn = netlist
+    for (target, parameter), factor in draw_factors(netlist, spreads, key).items():
+        drawn = _scaled(drawn, target, parameter, factor)
+    return drawn
+
+
+def draw_factors(netlist: Netlist, spreads: Sequence[Spread], key: str) -> dict[tuple[str, str], float]:
+    """Return what `draw_unit` multiplies nominal values with, by (part or ``param:<name>``, parameter).
+
+    Raises
+    ------
+    UnknownName
+        As `draw_unit`.
+    """
     chosen: dict[tuple[str, str], Spread] = {}
     for spread in spreads:
         parameter = spread.parameter.lower()
         for target in _targets(netlist, spread, parameter):
             chosen.pop((target, parameter), None)
             chosen[target, parameter] = spread
-    drawn = netlist
-    for (target, parameter), spread in chosen.items():
-        factor = spread.factor(draw_probability(key, target, parameter))
-        drawn = _scaled(drawn, target, parameter, factor)
-    return drawn
+    return {
+        (target, parameter): spread.factor(draw_probability(key, target, parameter))
+        for (target, parameter), spread in chosen.items()
+    }
 
 
 def _targets(netlist: Netlist, spread: Spread, parameter: str) -> list[str]:

@@ -19,7 +19,8 @@ def main(argv: Sequence[str] | None = None) -> int:
     """Test good units and one unit a fault; print the table."""
     from fixture.domain.run import RunResult
     from fixture.domain.verdict import Verdict
-    from fixture.lots.trial import Trial, try_units
+    from fixture.lots.pool import try_units
+    from fixture.lots.trial import Trial
     from fixture.modelfile import find_model
     from tests.endtoend.peat_faults import PEAT_FAULTS
 
