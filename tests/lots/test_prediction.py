@@ -7,7 +7,8 @@ import pytest
 from scipy.stats import lognorm, norm
 
 from fixture.domain.reading import Curve
-from fixture.lots.prediction import K_SIGMA, LEAST_UNITS, half_spreads, predict_limits, predict_mask
+from fixture.lots.prediction import K_SIGMA, LEAST_UNITS, predict_limits, predict_mask
+from fixture.quality.limit_fit import half_spreads
 
 
 def test_both_half_spreads_of_a_normal_sample_are_its_sigma() -> None:
