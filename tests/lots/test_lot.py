@@ -84,7 +84,7 @@ def test_a_lot_is_recorded_like_any_unit_and_its_truth_stands_apart(root: Path, 
 def test_units_in_parallel_read_what_they_read_one_by_one(root: Path, run: Run) -> None:
     run(*LOT, "--jobs", "2")
     found = readings_of(root)
-    lines = next(root.glob("logs/simulated/truth/*.jsonl")).read_text(encoding="utf-8").splitlines()
+    lines = next(root.glob("logs/truth/*.jsonl")).read_text(encoding="utf-8").splitlines()
     unit = json.loads(lines[1])
     alone = try_unit(root, "peat", Trial(unit["serial"], tuple(unit["planted"]), unit["ambient_celsius"]))
     for judged in alone.readings:
