@@ -55,7 +55,7 @@ def test_the_code_of_the_command_is_the_exit_code() -> None:
     [
         (["tset", "PT-1"], 'did you mean "test"?'),
         (["--root", ".", "tracee"], 'did you mean "trace"?'),
-        (["qwertz"], "there are test, trace, models, limits, circuit"),
+        (["qwertz"], "there are test, lot, tune, trace, models, limits, circuit"),
         (["trace"], "SERIAL"),
         (["trace", "PT-1", "--jsn"], "--jsn"),
         (["test", "PT-1", "--pace", "slow"], "fast"),

@@ -106,6 +106,9 @@ def test_applied_limits_are_the_next_revision_with_reason_history_and_statistics
     assert (revision.number, revision.author, revision.basis) == (3, "A. Fell", "pilot")
     assert "40 units, PT-9001-0001 to PT-9001-0040" in revision.statistics[0]
     assert len(revision.statistics) == 1 + 9
+    bias = next(step for step in model.procedures["line"].steps if step.name == "Bias")
+    q2 = bias.limits["q2_collector"]
+    assert (getattr(q2, "least", None), getattr(q2, "most", None)) == (-7.2, -2.0)
     text = path.read_text(encoding="utf-8")
     assert "# of the bench, not of the unit" in text and "[[history]]" in text  # comments are kept
     assert (path.parent / "history" / "r2.toml").read_text(encoding="utf-8") == old

@@ -149,6 +149,16 @@ ONE_FAULT = {
         '{ low = "0.3 V", high = "1.2 V" }',
         'with supply.ground = "positive" its volts are negative',
     ),
+    "an engineering limit inside the limit": (
+        '{ low = "-1.2 V", high = "-0.3 V" }',
+        '{ low = "-1.2 V", high = "-0.3 V", least = "-1 V" }',
+        "least: -1.000 V is narrower than the limit on its side",
+    ),
+    "an engineering limit where there is none": (
+        'low = "49.5 dB", high = "-"',
+        'low = "49.5 dB", high = "-", most = "60 dB"',
+        "most: 60.00 dB is narrower than the limit on its side",
+    ),
     "over-voltage under the volts": ('"10 V"', '"8 V"', "8 V must exceed volts = 9 V"),
     "a pattern that does not compile": (r"'PT-\d{4}-\d{4}'", "'PT-('", "is not a regular expression"),
     "a serial in lower case": ('"PT-2612-0001"', '"pt-2612-0001"', 'is scanned as "PT-2612-0001"'),
@@ -258,3 +268,18 @@ def test_a_netlist_of_another_supply_is_refused(peat_file: Path, old: str, new: 
     edit(peat_file.parent / "circuit.cir", {old: new})
     with pytest.raises(BadFile, match=r"Vsup holds supply at .* mean -9\.000 V"):
         load_model(peat_file)
+
+
+def test_engineering_limits_and_statistics_are_read(peat_file: Path) -> None:
+    edit(
+        peat_file,
+        {
+            '{ low = "-1.2 V", high = "-0.3 V" }': '{ low = "-1.2 V", high = "-0.3 V", least = "-1.5 V", most = "-" }',
+            'basis = "predicted"\nmade_by': 'basis = "pilot"\nstatistics = ["60 units", "Bias: normal"]\nmade_by',
+        },
+    )
+    model = load_model(peat_file)
+    limits = model.procedures["line"].steps[1].limits["q1_collector"]
+    assert isinstance(limits, Limits) and (limits.least, limits.most) == (-1.5, None)
+    assert limits.within_engineering(-2.0, -0.2) == (-1.5, -0.2)
+    assert model.revision.statistics == ("60 units", "Bias: normal")
